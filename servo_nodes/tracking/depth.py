@@ -1,0 +1,95 @@
+# Copyright 2026 servo_nodes maintainers
+# SPDX-License-Identifier: Apache-2.0
+"""Depths of points: from the goal's plane or map, or from a depth image with its holes and edges.
+
+On the plane n . X = d a ray (x, y, 1) has the depth Z = d / (n . (x, y, 1)). Depth cameras invent points
+between a near and a far surface ("flying pixels") and lose others: a depth counts when the
+neighbourhood holds enough values and they agree.
+"""
+
+from __future__ import annotations
+
+import typing
+
+import numpy as np
+
+from servo_nodes.goal import Goal
+from servo_nodes.tracking.pictures import Metres
+from servo_nodes.values import Floats
+
+_REACH_PX = 2
+_LEAST_KNOWN = 0.5
+_MOST_SPREAD = 0.03
+
+
+def depths_on_plane(plane: Floats, xy: Floats) -> Floats:
+    """Return depths (N,), m, of rays (N, 2) on `plane` (nx, ny, nz, d); NaN where they miss it."""
+    slope = xy @ plane[:2] + plane[2]
+    with np.errstate(divide='ignore', invalid='ignore'):
+        depth = plane[3] / slope
+    return typing.cast(Floats, np.where(slope > 1e-6, depth, np.nan))
+
+
+def depths_in_image(metres: Metres, uv: Floats) -> Floats:
+    """Return depths (N,), m, at pixels (N, 2): the median around; NaN in holes and at edges.
+
+    At least half of the 5x5 neighbourhood must be known and lie, from its 10th to its 90th
+    percentile, within 3 % of the median: across an edge no value is right.
+    """
+    depths = np.full(len(uv), np.nan)
+    height, width = metres.shape
+    with np.errstate(invalid='ignore'):
+        inside = ((uv > -0.5) & (uv < (width - 0.5, height - 0.5))).all(-1)
+    if not inside.any():
+        return depths
+    at = np.rint(uv[inside]).astype(int)
+    span = np.arange(-_REACH_PX, _REACH_PX + 1)
+    rows = np.clip(at[:, 1, None, None] + span[:, None], 0, height - 1)
+    columns = np.clip(at[:, 0, None, None] + span, 0, width - 1)
+    values = np.sort(metres[rows, columns].reshape(len(at), -1).astype(np.float64), axis=1)
+    known = np.isfinite(values).sum(1)
+    enough = known >= _LEAST_KNOWN * values.shape[1]
+    last = np.maximum(known - 1, 0)
+    line = np.arange(len(at))
+    median = (values[line, last // 2] + values[line, (last + 1) // 2]) / 2
+    low, high = values[line, np.rint(0.1 * last).astype(int)], values[
+        line, np.rint(0.9 * last).astype(int)]
+    with np.errstate(invalid='ignore'):
+        agree = high - low <= _MOST_SPREAD * median
+    depths[inside] = np.where(enough & agree, median, np.nan)
+    return depths
+
+
+def depths_of_goal(goal: Goal, uv: Floats, xy: Floats) -> Floats:
+    """Return depths (N,), m, of points of a goal: its map where there is one, else its plane."""
+    if goal.depth is not None:
+        return depths_in_image(goal.depth, uv)
+    return depths_on_plane(goal.plane, xy)
+
+
+def plane_in_depth(metres: Metres, xy: Floats, uv: Floats) -> tuple[Floats, float] | None:
+    """Fit n . X = d to the depths at rays `xy` (N, 2), pixels `uv`.
+
+    Returns
+    -------
+    (plane, deviation) or None
+        The plane (4,) and the median distance of the points from it, m; None for fewer than six known
+        depths or a plane that does not face the camera.
+    """
+    depths = depths_in_image(metres, uv)
+    known = np.isfinite(depths)
+    if known.sum() < 6:
+        return None
+    points = np.concatenate([xy[known], np.ones((int(known.sum()), 1))], axis=1)
+    points *= depths[known, None]
+    weights = np.ones(len(points))
+    for _ in range(8):
+        centre = weights @ points / weights.sum()
+        normal = np.linalg.svd((points - centre) * np.sqrt(weights)[:, None])[2][2]
+        normal = normal if normal @ centre > 0 else -normal
+        distance = np.abs((points - centre) @ normal)
+        scale = max(1.4826 * float(np.median(distance)), 1e-4)
+        weights = (1 - np.minimum(distance / (4.685 * scale), 1.0) ** 2) ** 2 + 1e-9
+    if normal[2] < 0.05:
+        return None
+    return np.append(normal, normal @ centre), float(np.median(distance))

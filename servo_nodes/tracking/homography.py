@@ -1,0 +1,175 @@
+# Copyright 2026 servo_nodes maintainers
+# SPDX-License-Identifier: Apache-2.0
+"""The map of a plane between two views, in normalised coordinates.
+
+With X_c = R X_g + t the motion of a point from the goal's optical frame to the current one and the
+plane n . X_g = d, every point of the plane obeys X_c = (R + t n^T / d) X_g = H X_g. With X = Z (x, y, 1):
+
+    Z_c (x_c, 1) = Z_g H (x_g, 1)   =>   x_c = pi(H (x_g, 1)),   Z_c / Z_g = (H (x_g, 1))_3.
+
+A homography found from points is known up to a factor; the true one has its middle singular value equal
+to 1 (the direction orthogonal to n and to R^T t is only turned), and a positive depth fixes the sign.
+So the ratio of depths needs neither R, t nor n: only H. Source: Faugeras & Lustman 1988; Ma, Soatto,
+Kosecka & Sastry, An Invitation to 3-D Vision, 2004, ch. 5.3 (from memory, re-derived).
+
+The robust fit minimises sum w |x_c - pi(H x_g)|^2 by iterated linear least squares on the eight free
+numbers, with Tukey's weights (c = 4.685; 95 % efficient for Gaussian noise).
+"""
+
+from __future__ import annotations
+
+import typing
+from dataclasses import dataclass
+
+import numpy as np
+
+from servo_nodes.camera import Camera
+from servo_nodes.values import Floats
+
+TUKEY = 4.685
+# The median of |e| for two independent Gaussian components of scale 1 (Rayleigh): sqrt(2 ln 2).
+_RAYLEIGH_MEDIAN = 1.17741
+
+
+@dataclass(frozen=True, eq=False)
+class Fit:
+    """A robust homography: `matrix` (3, 3), `weights` (N,) 0..1, `residuals` (N,) in input units."""
+
+    matrix: Floats
+    weights: Floats
+    residuals: Floats
+    scale: float
+
+
+def mapped(matrix: Floats, xy: Floats) -> Floats:
+    """Return pi(H (x, 1)), (N, 2); NaN where a point falls behind the camera."""
+    image = xy @ matrix[:, :2].T + matrix[:, 2]
+    below = image[:, 2:]
+    return typing.cast(Floats, image[:, :2] / np.where(below > 1e-9, below, np.nan))
+
+
+def map_jacobian(matrix: Floats, xy: Floats) -> Floats:
+    """Return d pi(H (x, 1)) / d x, (N, 2, 2)."""
+    image = xy @ matrix[:, :2].T + matrix[:, 2]
+    below = image[:, 2, None]
+    ahead = image[:, :2] / below
+    jacobian = matrix[None, :2, :2] - ahead[:, :, None] * matrix[None, None, 2, :2]
+    return typing.cast(Floats, jacobian / below[:, :, None])
+
+
+def normed(matrix: Floats, xy: Floats) -> Floats | None:
+    """Return H with middle singular value 1 and positive depths at `xy`; None when it is no view."""
+    singular = np.linalg.svd(matrix, compute_uv=False)
+    if not (np.isfinite(singular).all() and singular[2] > 1e-6 * singular[0]):
+        return None
+    scaled = matrix / singular[1]
+    depths = xy @ scaled[2, :2] + scaled[2, 2]
+    if np.median(depths) < 0:
+        scaled, depths = -scaled, -depths
+    return typing.cast(Floats, scaled) if (depths > 0).all() else None
+
+
+def depth_ratios(matrix: Floats, goal_xy: Floats) -> Floats:
+    """Return Z_c / Z_g (N,) for a normed H; see the module's head."""
+    return typing.cast(Floats, goal_xy @ matrix[2, :2] + matrix[2, 2])
+
+
+def plausible(matrix: Floats, goal_xy: Floats, *, least_scale: float = 0.2,
+              most_scale: float = 5.0, most_skew: float = 6.0) -> bool:
+    """Say whether a normed H is a view a camera can have: not mirrored, not edge-on, not a speck.
+
+    The local map at every point keeps orientation, scales by `least_scale` to `most_scale`, and
+    stretches one direction at most `most_skew` times the other (a tilt of about 80 degrees).
+    """
+    jacobian = map_jacobian(matrix, goal_xy)
+    determinant = (jacobian[:, 0, 0] * jacobian[:, 1, 1] - jacobian[:, 0, 1] * jacobian[:, 1, 0])
+    if not (determinant > 0).all():
+        return False
+    square = (jacobian ** 2).sum((1, 2))
+    root = np.sqrt(np.maximum(square ** 2 - 4 * determinant ** 2, 0.0))
+    large, small = np.sqrt((square + root) / 2), np.sqrt(np.maximum((square - root) / 2, 1e-18))
+    scale = np.sqrt(determinant)
+    return bool(((least_scale <= scale) & (scale <= most_scale)
+                 & (large / small <= most_skew)).all())
+
+
+def robust_fit(goal_xy: Floats, xy: Floats, start: Floats | None = None, *, floor: float,
+               trust: Floats | None = None, rounds: int = 4) -> Fit | None:
+    """Fit a homography to points of which a minority may be wrong.
+
+    Parameters
+    ----------
+    goal_xy, xy : (N, 2), normalised
+    start : (3, 3), a first guess, against which the first residuals are taken; None: all count alike
+    floor : float
+        Least standard deviation believed, in the unit of `xy`: half the residuals may be equal.
+    trust : (N,), prior weights
+    rounds : int
+
+    Returns
+    -------
+    Fit or None
+        None for fewer than four points or a singular system.
+    """
+    count = len(xy)
+    if count < 4:
+        return None
+    trust = np.ones(count) if trust is None else trust
+    weights, matrix, scale = trust, start, floor
+    for _ in range(rounds):
+        if matrix is not None:
+            weights, _, scale = _weighed(matrix, goal_xy, xy, floor)
+            weights = weights * trust
+        if np.count_nonzero(weights > 0) < 4:
+            return None
+        matrix = _linear(goal_xy, xy, weights, matrix)
+        if matrix is None:
+            return None
+    if matrix is None:
+        return None
+    weights, residuals, scale = _weighed(matrix, goal_xy, xy, floor)
+    return Fit(matrix, weights, residuals, scale)
+
+
+def _weighed(matrix: Floats, goal_xy: Floats, xy: Floats,
+             floor: float) -> tuple[Floats, Floats, float]:
+    difference = mapped(matrix, goal_xy) - xy
+    residuals = np.sqrt((difference ** 2).sum(-1))
+    residuals[np.isnan(residuals)] = np.inf
+    scale = max(float(np.median(residuals)) / _RAYLEIGH_MEDIAN, floor)
+    u = np.minimum(residuals / (TUKEY * scale), 1.0)
+    return (1 - u * u) ** 2, residuals, scale
+
+
+def _linear(goal_xy: Floats, xy: Floats, weights: Floats, former: Floats | None) -> Floats | None:
+    count = len(xy)
+    if former is None:
+        below = np.ones(count)
+    else:
+        below = goal_xy @ former[2, :2] + former[2, 2]
+        below = np.where(np.abs(below) > 1e-6, below, 1e-6)
+    # Divided by the former denominator, the algebraic residual is the geometric one.
+    root = np.sqrt(weights) / below
+    rows = np.zeros((2, count, 9))
+    rows[0, :, 0:2] = rows[1, :, 3:5] = goal_xy * root[:, None]
+    rows[0, :, 2] = rows[1, :, 5] = root
+    ends = (-xy * root[:, None]).T
+    rows[:, :, 6:8] = ends[:, :, None] * goal_xy
+    rows[:, :, 8] = -ends
+    flat = rows.reshape(-1, 9)
+    normal = flat.T @ flat
+    try:
+        solution = np.linalg.solve(normal[:8, :8], normal[:8, 8])
+    except np.linalg.LinAlgError:
+        return None
+    matrix = np.append(solution, 1.0).reshape(3, 3)
+    return matrix if bool(np.isfinite(matrix).all()) else None
+
+
+def pixel_matrix(matrix: Floats, goal_camera: Camera, camera: Camera) -> Floats:
+    """Return the homography of pixels nearest to `matrix` through both lenses, for drawing.
+
+    Exact without distortion; else the pinhole parts alone.
+    """
+    result = camera.matrix @ matrix @ np.linalg.inv(goal_camera.matrix)
+    return typing.cast(Floats, result / result[2, 2])
