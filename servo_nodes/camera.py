@@ -126,18 +126,13 @@ class Camera:
         distorted = self._distorted(np.asarray(xy, dtype=np.float64))
         return typing.cast(Floats, distorted * (self.fx, self.fy) + (self.cx, self.cy))
 
-    def normalised_from_pixels(self, uv: npt.ArrayLike,
-                               near: npt.ArrayLike | None = None) -> Floats:
-        """Return undistorted coordinates (..., 2) of pixels (..., 2); NaN without a sure inverse.
-
-        `near` (..., 2) is where they are expected, normalised: fewer rounds, the same answer.
-        """
+    def normalised_from_pixels(self, uv: npt.ArrayLike) -> Floats:
+        """Return undistorted coordinates (..., 2) of pixels (..., 2); NaN without a sure inverse."""
         uv = np.asarray(uv, dtype=np.float64)
         target = (uv - (self.cx, self.cy)) / (self.fx, self.fy)
         if not any(self.distortion):
             return typing.cast(Floats, target)
-        start = None if near is None else np.array(near, dtype=np.float64).reshape(-1, 2)
-        return self._undistorted(target.reshape(-1, 2), start).reshape(uv.shape)
+        return self._undistorted(target.reshape(-1, 2)).reshape(uv.shape)
 
     def pixels_from_points(self, points_C: npt.ArrayLike) -> Floats:
         """Return pixels (..., 2) of points (..., 3), m in the optical frame; NaN where Z <= 0."""
@@ -151,6 +146,12 @@ class Camera:
         """Return d(u, v)/d(x, y), (..., 2, 2), at normalised coordinates (..., 2)."""
         jacobian = self._distortion_and_jacobian(np.asarray(xy, dtype=np.float64))[1]
         return typing.cast(Floats, jacobian * np.array([[self.fx], [self.fy]]))
+
+    def pixels_and_jacobian(self, xy: npt.ArrayLike) -> tuple[Floats, Floats]:
+        """Return pixels (..., 2) and d(u, v)/d(x, y), (..., 2, 2), at normalised (..., 2)."""
+        distorted, jacobian = self._distortion_and_jacobian(np.asarray(xy, dtype=np.float64))
+        return (typing.cast(Floats, distorted * (self.fx, self.fy) + (self.cx, self.cy)),
+                typing.cast(Floats, jacobian * np.array([[self.fx], [self.fy]])))
 
     def _distorted(self, xy: Floats) -> Floats:
         if not any(self.distortion):
@@ -189,9 +190,9 @@ class Camera:
         jacobian[..., 0, 1] = jacobian[..., 1, 0] = x * y * slope + 2 * p1 * x + 2 * p2 * y
         return self._distorted(xy), jacobian
 
-    def _undistorted(self, target: Floats, start: Floats | None = None) -> Floats:
+    def _undistorted(self, target: Floats) -> Floats:
         """Invert the lens by Newton's method; `target` (N, 2) is distorted, normalised."""
-        xy = self._first_guess(target) if start is None else start
+        xy = self._first_guess(target)
         with np.errstate(all='ignore'):
             for _ in range(_ROUNDS):
                 value, jacobian = self._distortion_and_jacobian(xy)

@@ -89,51 +89,58 @@ def carried(reference: Reference, camera: Camera, last: Sight, before: Grey,
     kept &= np.einsum('ni,ni->n', gap, gap) < _MOST_RETURN_PX ** 2
     if kept.sum() < 6:
         return None
-    xy = camera.normalised_from_pixels(uv[kept], near=last.xy[kept])
-    sure = np.isfinite(xy[:, 0])
-    goal_xy = reference.xy[last.index[kept]][sure]
-    plane = plane_through(goal_xy, xy[sure], 2.0 / camera.fx)
+    lens = camera.pixel_jacobian(last.xy[kept])
+    xy = _normalised(camera, uv[kept], last.uv[kept], last.xy[kept], lens)
+    plane = plane_through(reference.xy[last.index[kept]], xy, 2.0 / camera.fx)
     if plane is None or plane[1].sum() < 6:
         return None
     return homography.normed(plane[0], reference.xy[last.index])
 
 
-def verified(reference: Reference, camera: Camera, soft: Grey, matrix: Floats, limits: Limits, *,
+def verified(reference: Reference, camera: Camera, grey: Grey, matrix: Floats, limits: Limits, *,
              rounds: int) -> Sight | None:
     """Register the goal's points where `matrix` puts them and keep those that agree.
 
     Returns None when fewer than four do, or when what they agree on is no view a camera can have.
     """
-    below = homography.depth_ratios(matrix, reference.xy)
-    ahead = np.flatnonzero(below > 1e-3)
-    xy = homography.mapped(matrix, reference.xy[ahead])
-    guess = camera.pixels_from_normalised(xy)
-    inside = _within(guess, camera)
-    index, xy, guess = ahead[inside], xy[inside], guess[inside]
+    guess_xy, change = homography.mapped_and_jacobian(matrix, reference.xy)
+    guess, lens = camera.pixels_and_jacobian(guess_xy)
+    index = np.flatnonzero(_within(guess, camera))
     if len(index) < 4:
         return None
-    local = (camera.pixel_jacobian(xy) @ homography.map_jacobian(matrix, reference.xy[index])
-             @ reference.from_pixels[index])
-    found = reference.patches.register(soft, guess, local, index, rounds=rounds)
-    alike = found.likeness >= limits.likeness
-    if alike.sum() < 4:
+    guess_xy, guess, lens = guess_xy[index], guess[index], lens[index]
+    local = lens @ change[index] @ reference.from_pixels[index]
+    found = reference.patches.register(grey, guess, local, index, rounds=rounds)
+    alike = np.flatnonzero(found.likeness >= limits.likeness)
+    if len(alike) < 4:
         return None
-    xy = camera.normalised_from_pixels(found.uv, near=xy)
-    alike &= np.isfinite(xy[:, 0])
-    kept = index[alike]
-    fit = homography.robust_fit(reference.xy[kept], xy[alike], matrix,
-                                floor=_FLOOR_PX / camera.fx)
+    kept, uv = index[alike], found.uv[alike]
+    xy = _normalised(camera, uv, guess[alike], guess_xy[alike], lens[alike])
+    goal_xy = reference.xy[kept]
+    fit = homography.robust_fit(goal_xy, xy, matrix, floor=_FLOOR_PX / camera.fx, rounds=rounds)
     if fit is None:
         return None
-    near = fit.residuals * camera.fx <= limits.residual_px
-    good = near & (fit.weights > 0)
-    if good.sum() < 4:
+    good = np.flatnonzero((fit.residuals * camera.fx <= limits.residual_px) & (fit.weights > 0))
+    if len(good) < 4:
         return None
-    normed = homography.normed(fit.matrix, reference.xy[kept[good]])
-    if normed is None or not homography.plausible(normed, reference.xy[kept[good]]):
+    normed = homography.normed(fit.matrix, goal_xy[good])
+    if normed is None or not homography.plausible(normed, goal_xy[good]):
         return None
-    return Sight(normed, kept[good], found.uv[alike][good], xy[alike][good], fit.weights[good],
+    return Sight(normed, kept[good], uv[good], xy[good], fit.weights[good],
                  float(np.median(fit.residuals[good]) * camera.fx), len(index))
+
+
+def _normalised(camera: Camera, uv: Floats, near_uv: Floats, near_xy: Floats,
+                lens: Floats) -> Floats:
+    """Return normalised coordinates of pixels that lie a few px from known ones.
+
+    Two steps of Newton's method on the Jacobian `lens` at those: the rest is of the third order in the
+    distance over the focal length, far below a thousandth of a pixel.
+    """
+    inverse = np.linalg.inv(lens)
+    xy = near_xy + (inverse @ (uv - near_uv)[:, :, None])[:, :, 0]
+    missing = uv - camera.pixels_from_normalised(xy)
+    return typing.cast(Floats, xy + (inverse @ missing[:, :, None])[:, :, 0])
 
 
 def _within(uv: Floats, camera: Camera) -> npt.NDArray[np.bool_]:

@@ -48,13 +48,13 @@ def mapped(matrix: Floats, xy: Floats) -> Floats:
     return typing.cast(Floats, image[:, :2] / np.where(below > 1e-9, below, np.nan))
 
 
-def map_jacobian(matrix: Floats, xy: Floats) -> Floats:
-    """Return d pi(H (x, 1)) / d x, (N, 2, 2)."""
+def mapped_and_jacobian(matrix: Floats, xy: Floats) -> tuple[Floats, Floats]:
+    """Return pi(H (x, 1)), (N, 2), and its change with x, (N, 2, 2)."""
     image = xy @ matrix[:, :2].T + matrix[:, 2]
-    below = image[:, 2, None]
-    ahead = image[:, :2] / below
-    jacobian = matrix[None, :2, :2] - ahead[:, :, None] * matrix[None, None, 2, :2]
-    return typing.cast(Floats, jacobian / below[:, :, None])
+    below = np.where(image[:, 2:] > 1e-9, image[:, 2:], np.nan)
+    there = image[:, :2] / below
+    jacobian = matrix[:2, :2] - there[:, :, None] * matrix[2, :2]
+    return there, typing.cast(Floats, jacobian / below[:, :, None])
 
 
 def normed(matrix: Floats, xy: Floats) -> Floats | None:
@@ -81,7 +81,7 @@ def plausible(matrix: Floats, goal_xy: Floats, *, least_scale: float = 0.2,
     The local map at every point keeps orientation, scales by `least_scale` to `most_scale`, and
     stretches one direction at most `most_skew` times the other (a tilt of about 80 degrees).
     """
-    jacobian = map_jacobian(matrix, goal_xy)
+    jacobian = mapped_and_jacobian(matrix, goal_xy)[1]
     determinant = (jacobian[:, 0, 0] * jacobian[:, 1, 1] - jacobian[:, 0, 1] * jacobian[:, 1, 0])
     if not (determinant > 0).all():
         return False
@@ -134,9 +134,10 @@ def robust_fit(goal_xy: Floats, xy: Floats, start: Floats | None = None, *, floo
 def _weighed(matrix: Floats, goal_xy: Floats, xy: Floats,
              floor: float) -> tuple[Floats, Floats, float]:
     difference = mapped(matrix, goal_xy) - xy
-    residuals = np.sqrt((difference ** 2).sum(-1))
+    residuals = np.hypot(difference[:, 0], difference[:, 1])
     residuals[np.isnan(residuals)] = np.inf
-    scale = max(float(np.median(residuals)) / _RAYLEIGH_MEDIAN, floor)
+    middle = len(residuals) // 2
+    scale = max(float(np.partition(residuals, middle)[middle]) / _RAYLEIGH_MEDIAN, floor)
     u = np.minimum(residuals / (TUKEY * scale), 1.0)
     return (1 - u * u) ** 2, residuals, scale
 

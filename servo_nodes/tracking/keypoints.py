@@ -81,19 +81,19 @@ class Describer:
         return Matches(clear[kept], best[kept].astype(np.intp))
 
 
-def strong_points(soft: Grey, count: int, margin: int) -> Floats:
+def strong_points(grey: Grey, count: int, margin: int) -> Floats:
     """Return up to `count` corners (N, 2), px, whole numbers, spread over the picture.
 
     Corners are Shi & Tomasi's (CVPR 1994). Each cell of a coarse grid gives its best before any gives
     its second, so that a crowded part does not take all.
     """
-    height, width = soft.shape
+    height, width = grey.shape
     if min(height, width) <= 2 * margin + 2:
         return np.empty((0, 2))
-    mask = np.zeros_like(soft)
+    mask = np.zeros_like(grey)
     mask[margin:height - margin, margin:width - margin] = 255
     gap = max(4.0, 0.45 * float(np.sqrt(height * width / count)))
-    found = cv2.goodFeaturesToTrack(soft, 6 * count, 0.005, gap, mask=mask, blockSize=7)
+    found = cv2.goodFeaturesToTrack(grey, 6 * count, 0.005, gap, mask=mask, blockSize=7)
     if found is None:
         return np.empty((0, 2))
     uv = np.rint(np.asarray(found, dtype=np.float64).reshape(-1, 2))

@@ -33,15 +33,14 @@ class Reference:
 
     def __init__(self, goal: Goal, *, points: int, describer: Describer) -> None:
         self.goal = goal
-        soft = patches.softened(goal.view)
-        uv = strong_points(soft, points, MARGIN)
+        uv = strong_points(goal.view, points, MARGIN)
         xy = goal.camera.normalised_from_pixels(uv)
         sure = np.isfinite(xy).all(-1)
         self.uv: Floats = uv[sure]
         self.xy: Floats = xy[sure]
         self.depths: Floats = depths_of_goal(goal, self.uv, self.xy)
         self.from_pixels: Floats = np.linalg.inv(goal.camera.pixel_jacobian(self.xy))
-        self.patches = patches.Patches(soft, self.uv)
+        self.patches = patches.Patches(goal.view, self.uv)
         keypoints = describer.describe(goal.view)
         keypoints_xy = goal.camera.normalised_from_pixels(keypoints.uv)
         sure = np.isfinite(keypoints_xy).all(-1)

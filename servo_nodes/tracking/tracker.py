@@ -14,7 +14,6 @@ from servo_nodes.tracking import consensus, follow, homography
 from servo_nodes.tracking import depth as depths
 from servo_nodes.tracking.keypoints import Describer
 from servo_nodes.tracking.options import TrackerSettings
-from servo_nodes.tracking.patches import softened
 from servo_nodes.tracking.pictures import Grey, grey_from_image, metres_from_depth
 from servo_nodes.tracking.reference import Reference
 from servo_nodes.values import Answer, Calibration, Floats, Image, View
@@ -185,21 +184,20 @@ class Tracker:
         return refusal
 
     def _seen(self, reference: Reference, camera: Camera, grey: Grey) -> follow.Sight | None:
-        soft, half = softened(grey), follow.halved(grey)
+        half = follow.halved(grey)
         sight = None
         if self._last is not None and self._half is not None:
             matrix = follow.carried(reference, camera, self._last, self._half, half)
             if matrix is not None:
-                sight = follow.verified(reference, camera, soft, matrix, self._limits, rounds=2)
-                if sight is not None and len(sight) < self._settings.consensus.keep_points:
+                sight = follow.verified(reference, camera, grey, matrix, self._limits, rounds=2)
+                if sight is not None and not self._believed(sight, 'keep'):
                     sight = None
         if sight is None:
-            sight = self._acquired(reference, camera, grey, soft)
+            sight = self._acquired(reference, camera, grey)
         self._last, self._half = sight, half
         return sight
 
-    def _acquired(self, reference: Reference, camera: Camera, grey: Grey,
-                  soft: Grey) -> follow.Sight | None:
+    def _acquired(self, reference: Reference, camera: Camera, grey: Grey) -> follow.Sight | None:
         keypoints = self._describer.describe(grey)
         pairs = self._describer.match(reference.keypoints, keypoints)
         xy = camera.normalised_from_pixels(keypoints.uv[pairs.second])
@@ -216,14 +214,17 @@ class Tracker:
         if matrix is None or not alarms < np.log10(consensus.ONCE_IN):
             return None
         loose = follow.Limits(0.6 * self._limits.likeness, 3.0)
-        sight = follow.verified(reference, camera, soft, matrix, loose, rounds=3)
+        sight = follow.verified(reference, camera, grey, matrix, loose, rounds=3)
         if sight is not None:
-            sight = follow.verified(reference, camera, soft, sight.matrix, self._limits, rounds=3)
-        if sight is None or len(sight) < self._settings.consensus.acquire_points:
-            return None
-        if consensus.log10_chance(sight.expected, len(sight)) > np.log10(consensus.ONCE_IN):
-            return None
-        return sight
+            sight = follow.verified(reference, camera, grey, sight.matrix, self._limits, rounds=3)
+        return sight if sight is not None and self._believed(sight, 'acquire') else None
+
+    def _believed(self, sight: follow.Sight, when: str) -> bool:
+        options = self._settings.consensus
+        least = options.acquire_points if when == 'acquire' else options.keep_points
+        return (len(sight) >= least and len(sight) >= consensus.LEAST_SHARE * sight.expected
+                and consensus.log10_chance(sight.expected, len(sight))
+                <= np.log10(consensus.ONCE_IN))
 
     def _view(self, image: Image, depth: Image | None, reference: Reference, camera: Camera,
               sight: follow.Sight) -> View:
