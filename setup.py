@@ -5,6 +5,7 @@
 from glob import glob
 
 from setuptools import find_packages, setup
+from setuptools.command.install import install
 
 PACKAGE = 'servo_nodes'
 
@@ -17,6 +18,22 @@ STANDALONE = [
     'ros-geometry-msgs', 'ros-lifecycle-msgs', 'ros-rcl-interfaces', 'ros-rosgraph-msgs',
     'ros-sensor-msgs', 'ros-std-msgs', 'ros-std-srvs',
 ]
+
+class Install(install):
+    """Let setup.cfg place the executables for colcon and for distribution builds only.
+
+    They name a prefix, or repeat the place on the command line. A pip that finds no `wheel`
+    package runs this very command without either, and its users look for the executables on
+    their path.
+    """
+
+    def finalize_options(self):
+        source, _ = self.distribution.get_option_dict('install').get(
+            'install_scripts', ('nowhere', None))
+        if source.endswith('setup.cfg') and self.prefix is None and self.root is None:
+            self.install_scripts = None
+        super().finalize_options()
+
 
 setup(
     name=PACKAGE,
@@ -38,7 +55,7 @@ setup(
     ],
     # No window is ever opened: the headless wheel runs where the other one misses libGL.
     install_requires=[
-        'setuptools', 'numpy>=1.26', 'opencv-python-headless>=4.6', 'scipy>=1.11',
+        'numpy>=1.26', 'opencv-python-headless>=4.6', 'scipy>=1.11',
         'transforms3d>=0.4.2', 'PyYAML>=6.0',
     ],
     extras_require={
@@ -46,8 +63,8 @@ setup(
         'report': ['matplotlib>=3.7'],
         'bags': ['rosbags>=0.10'],
         'test': [
-            'pytest>=7.4', 'pytest-timeout>=2.2', 'pytest-cov>=4.1', 'hypothesis>=6.90', 'pin>=2.7',
-            'pytransform3d>=3.5', 'scikit-image>=0.22', 'lxml>=4.9',
+            'pytest>=7.4', 'pytest-timeout>=2.2', 'pytest-cov>=4.1', 'hypothesis>=6.90',
+            'pin>=2.7', 'pytransform3d>=3.5', 'scikit-image>=0.22',
         ],
     },
     entry_points={
@@ -56,5 +73,6 @@ setup(
             *(f'{tool} = {PACKAGE}.{module}:main' for tool, module in TOOLS.items()),
         ],
     },
+    cmdclass={'install': Install},
     zip_safe=False,
 )

@@ -213,8 +213,8 @@ class Camera:
             return target.copy()
         # theta_d is nearly theta: start on the ray of the ideal lens, but in front of the camera.
         r = np.linalg.norm(target, axis=-1, keepdims=True)
-        return typing.cast(Floats, target * np.where(
-            r > 1e-9, np.tan(np.minimum(r, 1.5)) / np.maximum(r, 1e-9), 1.0))
+        stretch = np.where(r > 1e-9, np.tan(np.minimum(r, 1.5)) / np.maximum(r, 1e-9), 1.0)
+        return typing.cast(Floats, target * stretch)
 
     def _has_inverse(self, xy: Floats, jacobian: Floats) -> npt.NDArray[np.bool_]:
         determinant = (jacobian[:, 0, 0] * jacobian[:, 1, 1] - jacobian[:, 0, 1] ** 2)

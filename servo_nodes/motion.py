@@ -11,9 +11,9 @@ and J is the left Jacobian of SO(3). Below `SMALL_ANGLE` the coefficients come f
 Source: Murray, Li & Sastry, A Mathematical Introduction to Robotic Manipulation, 1994, ch. 2;
 Barfoot, State Estimation for Robotics, 2017, ch. 7 (formulas from memory, re-derived).
 
-`T_AB` is the pose of frame B in frame A, (..., 4, 4): it takes coordinates in B to A. A camera whose
-twist xi in its own frame is constant moves by `T_WC <- T_WC @ exp(xi dt)`. Everything broadcasts over
-leading axes. This is the only file that knows the order of a quaternion.
+`T_AB` is the pose of frame B in frame A, (..., 4, 4): it takes coordinates in B to A. A camera
+whose twist xi in its own frame is constant moves by `T_WC <- T_WC @ exp(xi dt)`. Everything
+broadcasts over leading axes. This is the only file that knows the order of a quaternion.
 """
 
 from __future__ import annotations
@@ -62,7 +62,7 @@ def rotation_from_vector(w: npt.ArrayLike) -> Floats:
 
 
 def vector_from_rotation(rotation: npt.ArrayLike) -> Floats:
-    """Return the rotation vectors (..., 3), rad, of length at most pi; at pi either sign is right."""
+    """Return the rotation vectors (..., 3), rad, at most pi long; at pi either sign is right."""
     w, xyz = _quaternion_parts(np.asarray(rotation, dtype=np.float64))
     sine = np.linalg.norm(xyz, axis=-1, keepdims=True)
     half = np.arctan2(sine, w[..., None])
@@ -73,7 +73,7 @@ def vector_from_rotation(rotation: npt.ArrayLike) -> Floats:
 
 
 def _quaternion_parts(rotation: Floats) -> tuple[Floats, Floats]:
-    """Return the scalar (>= 0) and vector part by Shepperd's method: divide by the largest part."""
+    """Return the scalar (>= 0) and vector part by Shepperd's method: divide by the largest."""
     diagonal = np.diagonal(rotation, axis1=-2, axis2=-1)
     trace = diagonal.sum(-1)
     candidates = np.empty(rotation.shape[:-2] + (4, 4))
@@ -147,7 +147,8 @@ def inverse(pose: npt.ArrayLike) -> Floats:
     """Return the inverse motions (..., 4, 4)."""
     pose = np.asarray(pose, dtype=np.float64)
     transposed = np.swapaxes(pose[..., :3, :3], -1, -2)
-    return pose_from_parts(transposed, -np.einsum('...ij,...j->...i', transposed, pose[..., :3, 3]))
+    translation = -np.einsum('...ij,...j->...i', transposed, pose[..., :3, 3])
+    return pose_from_parts(transposed, translation)
 
 
 def adjoint(T_AB: npt.ArrayLike) -> Floats:
@@ -184,10 +185,11 @@ def rotation_from_quaternion(xyzw: npt.ArrayLike) -> Floats:
     ValueError
         When the quaternion is not four finite numbers or has no length.
     """
-    x, y, z, w = np.asarray(xyzw, dtype=np.float64)
-    length = float(np.linalg.norm((x, y, z, w)))
-    if not 1e-6 <= length < np.inf:
-        raise ValueError(f'quaternion: expected finite numbers of unit length, got {xyzw!r}')
+    quaternion = np.asarray(xyzw, dtype=np.float64)
+    length = float(np.linalg.norm(quaternion))
+    if quaternion.shape != (4,) or not 1e-6 <= length < np.inf:
+        raise ValueError(f'quaternion: expected 4 finite numbers of unit length, got {xyzw!r}')
+    x, y, z, w = quaternion
     return typing.cast(Floats, _transforms3d().quat2mat(np.array([w, x, y, z]) / length))
 
 
@@ -210,6 +212,7 @@ def _transforms3d() -> typing.Any:
     try:
         from transforms3d import quaternions
     except (ImportError, AttributeError) as error:
-        raise ImportError('transforms3d: expected 0.4.2 or newer (pip install "transforms3d>=0.4.2" '
-                          f'or apt install python3-transforms3d), got: {error}') from error
+        raise ImportError('transforms3d: expected 0.4.2 or newer (pip install '
+                          '"transforms3d>=0.4.2" or apt install python3-transforms3d), '
+                          f'got: {error}') from error
     return quaternions

@@ -2,8 +2,8 @@
 # SPDX-License-Identifier: Apache-2.0
 """How a settings dataclass declares unit, range, default and help, and is read strictly.
 
-One frozen dataclass per core is the only definition of its settings; ROS parameter descriptors, the
-YAML files and the tables of the README are derived from it or checked against it:
+One frozen dataclass per core is the only definition of its settings; ROS parameter descriptors,
+the YAML files and the tables of the README are derived from it or checked against it:
 
     @dataclass(frozen=True)
     class LawSettings(Checked):
@@ -64,10 +64,12 @@ class Definition:
         if isinstance(value, (str, bytes)) or not isinstance(value, Iterable):
             raise ValueError(f'{self.name}: expected {self.expectation()}, got {value!r}')
         items = tuple(value)
-        if not all(isinstance(item, (int, float)) and not isinstance(item, bool) for item in items):
+        if not all(isinstance(item, (int, float)) and not isinstance(item, bool)
+                   for item in items):
             raise ValueError(f'{self.name}: expected {self.expectation()}, got {items!r}')
         if self.lengths and len(items) not in self.lengths:
-            raise ValueError(f'{self.name}: expected {self.expectation()}, got {len(items)} numbers')
+            raise ValueError(f'{self.name}: expected {self.expectation()}, '
+                             f'got {len(items)} numbers')
         for item in items:
             self._check_range(item)
         return tuple(float(item) for item in items)
@@ -143,7 +145,7 @@ Settings = typing.TypeVar('Settings')
 
 def settings_from_mapping(cls: type[Settings], values: Mapping[str, object],
                           base: Settings | None = None) -> Settings:
-    """Build `cls` from dotted or nested names; what is not named comes from `base` or the defaults.
+    """Build `cls` from dotted or nested names; the rest comes from `base` or the defaults.
 
     Raises
     ------

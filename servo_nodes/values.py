@@ -2,9 +2,9 @@
 # SPDX-License-Identifier: Apache-2.0
 """The nouns that cross rooms: frozen values without behaviour of their own.
 
-Times are integer nanoseconds of one clock per run. Twists are ordered linear, angular and are those
-of the camera, relative to the target's world, expressed in the optical frame (x right, y down,
-z forward; REP 103). Arrays handed to a value are copied, cast and made read-only.
+Times are integer nanoseconds of one clock per run. Twists are ordered linear, angular and are
+those of the camera, relative to the target's world, expressed in the optical frame (x right, y
+down, z forward; REP 103). Arrays handed to a value are copied, cast and made read-only.
 """
 
 from __future__ import annotations

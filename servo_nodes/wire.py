@@ -2,9 +2,9 @@
 # SPDX-License-Identifier: Apache-2.0
 """ROS message shapes <-> values, both directions, by attribute only: no ROS is imported.
 
-Reading functions are `value_from_message`; writing ones fill a message the caller made, and take the
-classes of nested messages where they must make some. Times are converted here and nowhere else, by
-integers. Every refusal is a `ValueError` that names the field.
+Reading functions are `value_from_message`; writing ones fill a message the caller made, and take
+the classes of nested messages where they must make some. Times are converted here and nowhere
+else, by integers. Every refusal is a `ValueError` that names the field.
 """
 
 from __future__ import annotations
@@ -69,18 +69,21 @@ def image_from_message(message: typing.Any) -> Image:
     """
     encoding = str(message.encoding)
     if encoding not in ENCODINGS:
-        raise ValueError(f'image encoding: expected one of {", ".join(ENCODINGS)}, got {encoding!r}')
+        raise ValueError(f'image encoding: expected one of {", ".join(ENCODINGS)}, '
+                         f'got {encoding!r}')
     code, channels = ENCODINGS[encoding]
     width, height, step = int(message.width), int(message.height), int(message.step)
     if not (1 <= width <= MAX_IMAGE_SIDE and 1 <= height <= MAX_IMAGE_SIDE):
-        raise ValueError(f'image size: expected 1 to {MAX_IMAGE_SIDE} px a side, got {width}x{height}')
+        raise ValueError(f'image size: expected 1 to {MAX_IMAGE_SIDE} px a side, '
+                         f'got {width}x{height}')
     item = np.dtype(code).newbyteorder('>' if message.is_bigendian else '<')
     row = width * channels * item.itemsize
     if step < row or step % item.itemsize:
-        raise ValueError(f'image step: expected at least {row} bytes for {width} px of {encoding}, '
-                         f'got {step}')
+        raise ValueError(f'image step: expected at least {row} bytes for {width} px of '
+                         f'{encoding}, a multiple of {item.itemsize}, got {step}')
     if step * height > MAX_IMAGE_BYTES:
-        raise ValueError(f'image size: expected at most {MAX_IMAGE_BYTES} bytes, got {step * height}')
+        raise ValueError(f'image size: expected at most {MAX_IMAGE_BYTES} bytes, '
+                         f'got {step * height}')
     data = np.frombuffer(message.data, dtype=np.uint8)
     needed = step * (height - 1) + row
     if data.size < needed:
@@ -95,7 +98,7 @@ def image_from_message(message: typing.Any) -> Image:
 
 def fill_image(message: typing.Any, image: Image) -> None:
     """Write an image into a sensor_msgs/Image; `array('B').frombytes` is the cheap way in."""
-    pixels = np.ascontiguousarray(image.array)
+    pixels = np.ascontiguousarray(image.array, image.array.dtype.newbyteorder('='))
     fill_time(message.header.stamp, image.stamp)
     message.header.frame_id = image.frame_id
     message.height, message.width = pixels.shape[:2]
@@ -108,10 +111,11 @@ def fill_image(message: typing.Any, image: Image) -> None:
 
 
 def calibration_from_message(message: typing.Any) -> Calibration:
-    """Return the content of a sensor_msgs/CameraInfo; whether it is usable is the camera's to say."""
+    """Return the content of a sensor_msgs/CameraInfo; the camera judges whether it is usable."""
     roi = message.roi
     return Calibration(
-        frame_id=str(message.header.frame_id), width=int(message.width), height=int(message.height),
+        frame_id=str(message.header.frame_id),
+        width=int(message.width), height=int(message.height),
         model=str(message.distortion_model), d=_floats(message.d), k=_floats(message.k),
         r=_floats(message.r), p=_floats(message.p),
         binning=(int(message.binning_x), int(message.binning_y)),
@@ -135,8 +139,8 @@ def fill_camera_info(message: typing.Any, calibration: Calibration, stamp: Stamp
 def view_from_cloud(message: typing.Any) -> View:
     """Return the view of a `features` PointCloud2.
 
-    Fields are found by name, so that other publishers may add or reorder some; numbers are not judged
-    here (NaN depths are meant, other non-finite values are the gate's to refuse).
+    Fields are found by name, so that other publishers may add or reorder some; numbers are not
+    judged here (NaN depths are meant, other non-finite values are the gate's to refuse).
 
     Raises
     ------
@@ -150,6 +154,9 @@ def view_from_cloud(message: typing.Any) -> View:
         return View.empty(stamp, frame_id)
     if count > MAX_POINTS:
         raise ValueError(f'features: expected at most {MAX_POINTS} points, got {count}')
+    if message.height > 1 and message.row_step != message.width * step:
+        raise ValueError(f'features row_step: expected {message.width * step} bytes, rows without '
+                         f'padding, got {message.row_step}')
     if len(message.data) < count * step:
         raise ValueError(f'features data: expected {count * step} bytes for {count} points, '
                          f'got {len(message.data)}')
@@ -164,7 +171,8 @@ def _cloud_type(message: typing.Any) -> np.dtype[typing.Any]:
     for name in FIELDS:
         want = UINT32 if name == 'id' else FLOAT32
         if name not in given:
-            raise ValueError(f'features: expected a field {name!r}, got {", ".join(given) or "none"}')
+            raise ValueError(f'features: expected a field {name!r}, '
+                             f'got {", ".join(given) or "none"}')
         if given[name].datatype != want or given[name].offset + 4 > message.point_step:
             raise ValueError(f'features field {name}: expected datatype {want} inside a point of '
                              f'{message.point_step} bytes, got datatype {given[name].datatype} at '
@@ -213,7 +221,8 @@ def fill_twist(message: typing.Any, twist: Twist, stamp: Stamp) -> None:
     linear.x, linear.y, linear.z, angular.x, angular.y, angular.z = map(float, twist.vector)
 
 
-def fill_pose(pose: typing.Any, translation: npt.ArrayLike, quaternion_xyzw: npt.ArrayLike) -> None:
+def fill_pose(pose: typing.Any, translation: npt.ArrayLike,
+              quaternion_xyzw: npt.ArrayLike) -> None:
     """Write a translation (3,), m, and a quaternion x, y, z, w into a geometry_msgs/Pose."""
     position, orientation = pose.position, pose.orientation
     position.x, position.y, position.z = map(float, np.asarray(translation))
@@ -222,7 +231,7 @@ def fill_pose(pose: typing.Any, translation: npt.ArrayLike, quaternion_xyzw: npt
 
 
 def parts_from_pose(pose: typing.Any) -> tuple[Floats, Floats]:
-    """Return the translation (3,), m, and the quaternion (4,) x, y, z, w of a geometry_msgs/Pose."""
+    """Return the translation (3,), m, and quaternion (4,) x, y, z, w of a geometry_msgs/Pose."""
     position, orientation = pose.position, pose.orientation
     return (np.array([position.x, position.y, position.z]),
             np.array([orientation.x, orientation.y, orientation.z, orientation.w]))
