@@ -10,9 +10,9 @@ With x = X/Z, y = Y/Z and r^2 = x^2 + y^2 (Brown's model as in OpenCV's document
     equidistant          theta = atan r,  theta_d = theta (1 + k1 theta^2 + ... + k4 theta^8),
                          (xd, yd) = (x, y) theta_d / r       (Kannala & Brandt 2006)
 
-The inverse is iterated to convergence by Newton's method on the exact Jacobian. Where a model folds
-back or has a pole there is no inverse to be trusted: those points come back as NaN. Pixel (0, 0) is
-the centre of the first pixel.
+The inverse is iterated to convergence by Newton's method on the exact Jacobian. Where a model
+folds back or has a pole there is no inverse to be trusted: those points come back as NaN. Pixel
+(0, 0) is the centre of the first pixel.
 """
 
 from __future__ import annotations
@@ -73,8 +73,9 @@ class Camera:
             raise ValueError(f'distortion_model: expected one of {", ".join(MODELS)}, '
                              f'got {self.model!r}')
         if len(self.distortion) not in MODELS[self.model]:
-            raise ValueError(f'd: expected {" or ".join(map(str, MODELS[self.model]))} numbers for '
-                             f'{self.model}, got {len(self.distortion)}')
+            lengths = ' or '.join(map(str, MODELS[self.model]))
+            raise ValueError(f'd: expected {lengths} numbers for {self.model}, '
+                             f'got {len(self.distortion)}')
 
     @classmethod
     def from_calibration(cls, calibration: Calibration, *, rectified: bool = False) -> Camera:
@@ -102,6 +103,9 @@ class Camera:
         bin_x, bin_y = (max(1, int(b)) for b in calibration.binning)
         left, top, wide, high = calibration.roi
         wide, high = wide or calibration.width, high or calibration.height
+        if left + wide > calibration.width or top + high > calibration.height:
+            raise ValueError(f'roi: expected a region inside {calibration.width}x'
+                             f'{calibration.height} px, got {wide}x{high} at {left}, {top}')
         model = calibration.model or 'plumb_bob'
         return cls(width=wide // bin_x, height=high // bin_y, fx=fx / bin_x, fy=fy / bin_y,
                    cx=(cx - left) / bin_x, cy=(cy - top) / bin_y,
@@ -113,6 +117,11 @@ class Camera:
     def size(self) -> tuple[int, int]:
         """Return (width, height), px."""
         return self.width, self.height
+
+    @functools.cached_property
+    def is_pinhole(self) -> bool:
+        """Whether the lens does nothing; `equidistant` bends rays even with zero coefficients."""
+        return not self.distortion or (self.model != 'equidistant' and not any(self.distortion))
 
     @functools.cached_property
     def matrix(self) -> Floats:
@@ -127,10 +136,10 @@ class Camera:
         return typing.cast(Floats, distorted * (self.fx, self.fy) + (self.cx, self.cy))
 
     def normalised_from_pixels(self, uv: npt.ArrayLike) -> Floats:
-        """Return undistorted coordinates (..., 2) of pixels (..., 2); NaN without a sure inverse."""
+        """Return undistorted coordinates (..., 2) of pixels (..., 2); NaN without a sure one."""
         uv = np.asarray(uv, dtype=np.float64)
         target = (uv - (self.cx, self.cy)) / (self.fx, self.fy)
-        if not any(self.distortion):
+        if self.is_pinhole:
             return typing.cast(Floats, target)
         return self._undistorted(target.reshape(-1, 2)).reshape(uv.shape)
 
@@ -154,7 +163,7 @@ class Camera:
                 typing.cast(Floats, jacobian * np.array([[self.fx], [self.fy]])))
 
     def _distorted(self, xy: Floats) -> Floats:
-        if not any(self.distortion):
+        if self.is_pinhole:
             return xy
         if self.model == 'equidistant':
             r = np.hypot(xy[..., :1], xy[..., 1:])
@@ -174,9 +183,9 @@ class Camera:
         """Return distorted coordinates (..., 2) and their Jacobian (..., 2, 2)."""
         x, y = xy[..., 0], xy[..., 1]
         jacobian = np.empty(xy.shape + (2,))
-        if self.model == 'equidistant':
+        if self.model == 'equidistant' and not self.is_pinhole:
             r = np.hypot(x, y)
-            g, slope = _fisheye_scale(r, self.distortion or (0.0,) * 4)
+            g, slope = _fisheye_scale(r, self.distortion)
             jacobian[..., 0, 0], jacobian[..., 1, 1] = g + x * x * slope, g + y * y * slope
             jacobian[..., 0, 1] = jacobian[..., 1, 0] = x * y * slope
             return xy * g[..., None], jacobian
@@ -210,7 +219,7 @@ class Camera:
 
     def _first_guess(self, target: Floats) -> Floats:
         if self.model != 'equidistant':
-            return target.copy()
+            return np.array(target)
         # theta_d is nearly theta: start on the ray of the ideal lens, but in front of the camera.
         r = np.linalg.norm(target, axis=-1, keepdims=True)
         stretch = np.where(r > 1e-9, np.tan(np.minimum(r, 1.5)) / np.maximum(r, 1e-9), 1.0)
