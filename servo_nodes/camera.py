@@ -141,7 +141,11 @@ class Camera:
         target = (uv - (self.cx, self.cy)) / (self.fx, self.fy)
         if self.is_pinhole:
             return typing.cast(Floats, target)
-        return self._undistorted(target.reshape(-1, 2)).reshape(uv.shape)
+        xy = self._undistorted(target.reshape(-1, 2)).reshape(uv.shape)
+        # A lens model is fitted inside its image and says nothing far outside.
+        far = ~((uv > -np.array(self.size)) & (uv < 2 * np.array(self.size))).all(-1)
+        xy[far] = np.nan
+        return xy
 
     def pixels_from_points(self, points_C: npt.ArrayLike) -> Floats:
         """Return pixels (..., 2) of points (..., 3), m in the optical frame; NaN where Z <= 0."""

@@ -92,9 +92,9 @@ def test_the_library_default_would_be_pixels_off_where_ours_is_not():
     pixel = np.array([[[1380.0, 500.0]]])
     default = np.asarray(cv2.undistortPoints(
         pixel, KITTI.matrix, np.array(KITTI.distortion))).reshape(2)
-    off = np.linalg.norm(KITTI.pixels_from_normalised(default) - pixel[0, 0])
-    assert_allclose(off, 2.358, rtol=0.05)
     ours = KITTI.normalised_from_pixels(pixel[0, 0])
+    off = np.linalg.norm((default - ours) * (KITTI.fx, KITTI.fy))
+    assert_allclose(off, 2.358, rtol=0.05)
     assert np.linalg.norm(KITTI.pixels_from_normalised(ours) - pixel[0, 0]) < 1e-6
 
 
@@ -130,14 +130,12 @@ def test_rays_come_back_from_their_pixels(name, x, y):
 
 
 @pytest.mark.parametrize('name', CAMERAS)
-def test_a_near_start_gives_the_same_answer(name):
+def test_pixels_and_jacobian_at_once_are_those_one_by_one(name):
     camera = CAMERAS[name]
-    rng = np.random.default_rng(3)
-    rays = rng.uniform(-0.4, 0.4, (50, 2))
-    pixels = camera.pixels_from_normalised(rays)
-    near = rays + rng.normal(scale=0.01, size=rays.shape)
-    assert_allclose(camera.normalised_from_pixels(pixels, near=near),
-                    camera.normalised_from_pixels(pixels), rtol=0, atol=1e-9)
+    rays = np.random.default_rng(3).uniform(-0.4, 0.4, (50, 2))
+    pixels, jacobian = camera.pixels_and_jacobian(rays)
+    assert_allclose(pixels, camera.pixels_from_normalised(rays), rtol=0, atol=1e-9)
+    assert_allclose(jacobian, camera.pixel_jacobian(rays), rtol=0, atol=1e-9)
 
 
 def test_no_ray_is_given_beyond_the_fold():
@@ -163,7 +161,7 @@ def test_no_ray_is_given_near_the_pole_of_a_rational_model():
     for radius in (pole - 1e-6, pole, pole + 1e-6):
         pixel = FACTORY.pixels_from_normalised((radius, 0.0))
         ray = FACTORY.normalised_from_pixels(pixel)
-        assert np.isnan(ray).all() or np.linalg.norm(ray) < 0.6736
+        assert np.isnan(ray).all()
     rays = FACTORY.normalised_from_pixels(
         np.stack(np.meshgrid(np.arange(250.), np.arange(250.)), axis=-1))
     known = np.isfinite(rays).all(-1)
