@@ -1,3 +1,3 @@
 # Copyright 2026 servo_nodes maintainers
 # SPDX-License-Identifier: Apache-2.0
-"""From views of a goal to gated camera twists: laws, gate, states, and the controller over them."""
+"""From views of a goal to gated camera twists: laws, gate, states, controller."""

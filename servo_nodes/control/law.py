@@ -2,79 +2,70 @@
 # SPDX-License-Identifier: Apache-2.0
 """The laws: from points in the image to the twist that brings them home.
 
-The point law drives e = s - s* to zero with xi = -gain M e, where M is built from the interaction
+`points` drives e = s - s* to zero with xi = -gain M e, where M is built from the interaction
 matrix L at the current points and L* at the goal (Chaumette & Hutchinson 2006, from memory):
 
     current  M = pinv(L)              straight lines in the image; the camera retreats in rolls
     goal     M = pinv(L*)             needs no current depth; the camera advances in rolls
     mean     M = pinv((L + L*) / 2)   a pure roll stays a pure roll (Malis 2004)
     blend    M = (pinv(L) + pinv(L*)) / 2
+
+`polar` does the same with (rho, alpha) of each point, where a roll about the middle of the image
+is one and the same angle for all. `partitioned`, `hybrid` and `pose` have modules of their own.
+Weights enter as xi = -gain (D L)^+ D e. Everything broadcasts over leading axes.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 import numpy.typing as npt
+from scipy.optimize import lsq_linear
 
-from servo_nodes.control import interaction
-from servo_nodes.settings import Checked, setting
+from servo_nodes.control import (
+    hybrid,
+    interaction,
+    least_squares,
+    moments,
+    partitioned,
+    pose,
+    two_views,
+)
+from servo_nodes.control.law_settings import STACKED
+from servo_nodes.control.law_settings import LawSettings as LawSettings
 from servo_nodes.values import Floats
 
-KINDS = ('points',)
-INTERACTIONS = ('current', 'goal', 'mean', 'blend')
+
+def damping_of(settings: LawSettings) -> least_squares.Damping:
+    """Return the damping that the settings ask for."""
+    return least_squares.Damping(settings.damping.largest, settings.damping.below)
 
 
-@dataclass(frozen=True)
-class LawSettings(Checked):
-    """How views become a raw twist."""
-
-    kind: str = setting('points', choices=KINDS, help='which published law turns features into a twist')
-    interaction: str = setting(
-        'mean', choices=INTERACTIONS,
-        help='interaction matrix of the point law: at the current points, at the goal, the mean of '
-             'both matrices, or the blend (mean) of both pseudo-inverses')
-    gain: float = setting(
-        1.5, unit='1/s', low=0.01, high=20.0,
-        help='share of the error removed per second; too high overshoots, too low crawls')
-    fallback_depth: float = setting(
-        0.5, unit='m', low=0.01, high=100.0,
-        help='depth of points whose depth is known neither now nor in the goal')
+def stacks_of(points_xy: Floats, goal_xy: Floats, depths: Floats, goal_depths: Floats,
+              settings: LawSettings) -> tuple[Floats, ...]:
+    """Return the matrices (..., 2N, 6) that are inverted: one, or two to blend."""
+    matrix = interaction.polar if settings.kind == 'polar' else interaction.points
+    if settings.interaction == 'goal':
+        return (matrix(goal_xy, goal_depths),)
+    here = matrix(points_xy, depths)
+    if settings.interaction == 'current':
+        return (here,)
+    there = matrix(goal_xy, goal_depths)
+    return (here, there) if settings.interaction == 'blend' else (0.5 * (here + there),)
 
 
-@dataclass(frozen=True, eq=False)
-class Solved:
-    """Twists and what the stack they came from is worth.
-
-    Attributes
-    ----------
-    twist : (..., 6), m/s and rad/s, camera in its optical frame
-    smallest, largest : (...), singular values of the (weighted) stack that was inverted
-    """
-
-    twist: Floats
-    smallest: Floats
-    largest: Floats
-
-    @property
-    def condition(self) -> Floats:
-        """Return largest / smallest, inf for a stack without full rank."""
-        with np.errstate(divide='ignore', invalid='ignore'):
-            return np.where(self.smallest > 0, self.largest / self.smallest, np.inf)
+def _polar_error(points_xy: Floats, goal_xy: Floats) -> Floats:
+    """Return (rho - rho*, rho (alpha - alpha*)), with the angle the short way round."""
+    now, then = interaction.polar_coordinates(points_xy), interaction.polar_coordinates(goal_xy)
+    error = now - then
+    turned = np.pi - np.remainder(np.pi - error[..., 1], 2 * np.pi)
+    error[..., 1] = now[..., 0] * turned
+    return error
 
 
 def twists(points_xy: npt.ArrayLike, goal_xy: npt.ArrayLike, depths: npt.ArrayLike,
            goal_depths: npt.ArrayLike, settings: LawSettings, *,
-           weights: npt.ArrayLike | None = None) -> Floats:
-    """Return the raw twists (..., 6) of the law; see `solved` for the arguments."""
-    return solved(points_xy, goal_xy, depths, goal_depths, settings, weights=weights).twist
-
-
-def solved(points_xy: npt.ArrayLike, goal_xy: npt.ArrayLike, depths: npt.ArrayLike,
-           goal_depths: npt.ArrayLike, settings: LawSettings, *,
-           weights: npt.ArrayLike | None = None) -> Solved:
-    """Return the raw twists of the law and what the view is worth.
+           weights: npt.ArrayLike | None = None, gain: npt.ArrayLike | None = None) -> Floats:
+    """Return the raw twists (..., 6) of the law.
 
     Parameters
     ----------
@@ -82,33 +73,81 @@ def solved(points_xy: npt.ArrayLike, goal_xy: npt.ArrayLike, depths: npt.ArrayLi
     depths, goal_depths : (..., N), m, all known
     settings : LawSettings
     weights : (..., N), trust in each point, 0..1; None trusts all
+    gain : (...), 1/s; None takes `settings.gain`
+
+    Points at or behind the camera, or too few points for the law, give a twist that is not finite
+    or of minimum norm: the gate has the last word.
     """
-    points_xy, goal_xy = np.asarray(points_xy), np.asarray(goal_xy)
-    error = (points_xy - goal_xy).reshape(*points_xy.shape[:-2], -1, 1)
-    here = there = np.empty(0)
-    if settings.interaction != 'goal':
-        here = interaction.points(points_xy, depths)
-    if settings.interaction != 'current':
-        there = np.broadcast_to(interaction.points(goal_xy, goal_depths), (*error.shape[:-1], 6))
+    points_xy, goal_xy = np.asarray(points_xy, np.float64), np.asarray(goal_xy, np.float64)
+    depths, goal_depths = np.asarray(depths, np.float64), np.asarray(goal_depths, np.float64)
+    trust = None if weights is None else np.asarray(weights, np.float64)
+    factor = np.asarray(settings.gain if gain is None else gain, np.float64)[..., None]
+    if settings.kind in STACKED:
+        polar = settings.kind == 'polar'
+        error = _polar_error(points_xy, goal_xy) if polar else points_xy - goal_xy
+        stacks = stacks_of(points_xy, goal_xy, depths, goal_depths, settings)
+        return _from_stacks(stacks, error, settings, trust, factor)
+    return factor * _from_pose_or_parts(points_xy, goal_xy, depths, goal_depths, settings, trust)
+
+
+def _from_stacks(stacks: tuple[Floats, ...], error: Floats, settings: LawSettings,
+                 weights: Floats | None, factor: Floats) -> Floats:
+    """Return the mean of the twists (..., 6) that each stack (..., 2N, 6) gives."""
+    error = error.reshape(*error.shape[:-2], -1)
     if weights is not None:
-        rows = np.repeat(np.asarray(weights, dtype=np.float64), 2, axis=-1)[..., None]
-        error, here, there = (error * rows, here * rows if here.size else here,
-                              there * rows if there.size else there)
-    if settings.interaction == 'blend':
-        a, b = _least_squares(here, error), _least_squares(there, error)
-        return Solved(-0.5 * settings.gain * (a[0] + b[0]), np.minimum(a[1], b[1]),
-                      np.maximum(a[2], b[2]))
-    stack = {'current': here, 'goal': there}.get(settings.interaction)
-    if stack is None:
-        stack = 0.5 * (here + there)
-    twist, smallest, largest = _least_squares(stack, error)
-    return Solved(-settings.gain * twist, smallest, largest)
+        scale = np.repeat(weights, 2, axis=-1)
+        error, stacks = error * scale, tuple(stack * scale[..., None] for stack in stacks)
+    if settings.solver == 'box':
+        twist = [_box(stack, factor * error, settings) for stack in stacks]
+    else:
+        damping = damping_of(settings)
+        twist = [-factor * _fits_of_axes(stack, error, settings, damping) for stack in stacks]
+    return twist[0] if len(twist) == 1 else 0.5 * (twist[0] + twist[1])
 
 
-def _least_squares(stack: Floats, error: Floats) -> tuple[Floats, Floats, Floats]:
-    u, s, vt = np.linalg.svd(stack, full_matrices=False)
-    keep = s > 1e-12 * s[..., :1]
-    inverse = np.where(keep, 1.0 / np.where(keep, s, 1.0), 0.0)
-    twist = np.swapaxes(vt, -1, -2) @ (inverse[..., None] * (np.swapaxes(u, -1, -2) @ error))
-    smallest = s[..., -1] if s.shape[-1] == 6 else np.zeros(s.shape[:-1])
-    return twist[..., 0], smallest, s[..., 0]
+def _fits_of_axes(stack: Floats, error: Floats, settings: LawSettings,
+                  damping: least_squares.Damping) -> Floats:
+    axes = settings.axes
+    if len(axes) == 6:
+        return least_squares.fits(stack, error, damping)
+    part = least_squares.fits(stack[..., axes], error, damping)
+    twist = np.zeros((*part.shape[:-1], 6))
+    twist[..., axes] = part
+    return twist
+
+
+def _box(stack: Floats, push: Floats, settings: LawSettings) -> Floats:
+    """Return the twists within the box whose image motion is nearest to -push (..., 2N)."""
+    axes = settings.axes
+    limit = np.repeat([settings.box_linear, settings.box_angular], 3)[list(axes)]
+    lead = np.broadcast_shapes(stack.shape[:-2], push.shape[:-1])
+    flat = np.broadcast_to(stack, (*lead, *stack.shape[-2:])).reshape(-1, *stack.shape[-2:])
+    pushes = np.broadcast_to(push, (*lead, push.shape[-1])).reshape(-1, push.shape[-1])
+    twist = np.zeros((len(flat), 6))
+    for one, matrix, right in zip(twist, flat, pushes, strict=True):
+        if np.isfinite(matrix).all() and np.isfinite(right).all():
+            one[list(axes)] = lsq_linear(matrix[:, axes], -right, (-limit, limit), 'bvls').x
+        else:
+            one[:] = np.nan
+    return twist.reshape(*lead, 6)
+
+
+def _from_pose_or_parts(points_xy: Floats, goal_xy: Floats, depths: Floats, goal_depths: Floats,
+                        settings: LawSettings, weights: Floats | None) -> Floats:
+    if settings.kind == 'partitioned':
+        return partitioned.twists(points_xy, goal_xy, depths, weights, damping_of(settings))
+    T_GC = poses(points_xy, goal_xy, depths, goal_depths, settings, weights)
+    if settings.kind == 'pose':
+        return pose.twists(T_GC)
+    share = moments.shares(points_xy, weights)[..., None]
+    return hybrid.twists(T_GC, (share * pose.structure(goal_xy, goal_depths)).sum(-2))
+
+
+def poses(points_xy: Floats, goal_xy: Floats, depths: Floats, goal_depths: Floats,
+          settings: LawSettings, weights: Floats | None = None) -> Floats:
+    """Return T_GC (..., 4, 4), the camera in the goal's camera frame, from `settings.source`."""
+    if settings.source == 'structure':
+        return pose.relative(points_xy, goal_xy, depths, goal_depths, weights)
+    route = {'homography': two_views.pose_from_homography,
+             'essential': two_views.pose_from_essential}[settings.source]
+    return route(points_xy, goal_xy, goal_depths, weights)
