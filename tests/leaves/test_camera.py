@@ -3,8 +3,8 @@
 """The camera against OpenCV and against published calibrations.
 
 The numbers named CAM-* were computed with SciPy's root finding on the models' definitions, with
-`cv2.undistortPoints` at 500 iterations and with `cv2.fisheye`; calibrations are those of the public
-TUM RGB-D, KITTI, EuRoC and TUM-VI data sets.
+`cv2.undistortPoints` at 500 iterations and with `cv2.fisheye`; calibrations are those of the
+public TUM RGB-D, KITTI, EuRoC and TUM-VI data sets.
 """
 
 from __future__ import annotations
@@ -281,8 +281,8 @@ REFUSED = [
     (calibration(FR1, d=(0.1, 0.2)), 'd: expected 0 or 4 or 5 numbers for plumb_bob, got 2'),
     (calibration(FR1, d=(0.1,) * 8), 'd: expected 0 or 4 or 5 numbers for plumb_bob, got 8'),
     (calibration(FR1, model='rational_polynomial'), 'd: expected 0 or 8 numbers'),
-    (calibration(FR1, model='thin_prism'), "distortion_model: expected one of plumb_bob, .* got '"),
-    (calibration(FR1, width=0), f'camera size: expected 1 to {MAX_SIDE_PX} px a side, got 0x480'),
+    (calibration(FR1, model='thin_prism'), 'distortion_model: expected one of plumb_bob, .* got'),
+    (calibration(FR1, width=0), f'camera size: expected 1 to {MAX_SIDE_PX} px a side, got 0x4'),
     (calibration(FR1, height=10 ** 6), 'camera size: expected 1 to'),
     (calibration(FR1, roi=(600, 0, 100, 100)), 'roi: expected a region inside 640x480 px, got'),
     (calibration(FR1, roi=(0, 470, 0, 0)), 'roi: expected a region inside 640x480 px, got'),
