@@ -5,34 +5,33 @@
 Observing and deciding are two methods: what comes from outside is only noted, `command` judges it
 and always answers. The one clock is steady and counts integer nanoseconds; whoever hands over a
 view translates its stamp to that clock. `observe`, `refuse`, `heartbeat`, `halt`, `graph`,
-`overrun` and `jump` leave a note and may be called from another thread; the others must not overlap.
+`overrun` and `jump` leave a note and may come from another thread; the others must not overlap.
 """
 
 from __future__ import annotations
 
 import collections
-import math
 from collections.abc import Callable, Mapping
 
 import numpy as np
 
 from servo_nodes.camera import Camera
 from servo_nodes.control import gate, states
-from servo_nodes.control.gate import Reaction, Row, Situation
-from servo_nodes.control.progress import Growth, Settling, Stall
+from servo_nodes.control.gate import Reaction, Row
+from servo_nodes.control.progress import Progress
 from servo_nodes.control.servo import Servo, Solution
 from servo_nodes.control.settings import ControllerSettings
+from servo_nodes.control.situation import Situation
 from servo_nodes.control.states import ENGAGED, MOVING, Event
 from servo_nodes.control.surroundings import Surroundings
-from servo_nodes.control.tool import Outlet
-from servo_nodes.control.travel import Leash
-from servo_nodes.control.watch import Intake, age
+from servo_nodes.control.survey import figures, surveyed
+from servo_nodes.control.tool import REST, Numbers, Outlet
+from servo_nodes.control.watch import Intake
 from servo_nodes.settings import definitions, mapping_from_settings
 from servo_nodes.values import (
     SECOND_NS,
     Answer,
     Command,
-    Floats,
     Reason,
     Stamp,
     State,
@@ -42,8 +41,6 @@ from servo_nodes.values import (
 
 INBOX = 64
 _EVENTS = {Reaction.FAULT: Event.FAULT, Reaction.STANDBY: Event.JUMP, Reaction.HOLD: Event.HOLD}
-_REST = np.zeros(6)
-_REST.setflags(write=False)
 
 
 class Controller:
@@ -60,14 +57,14 @@ class Controller:
         self._intake = Intake(settings.watchdog)
         self._outlet = Outlet(settings.caps, settings.output)
         self._around = Surroundings()
-        self._growth, self._stall, self._settling = Growth(), Stall(), Settling()
-        self._leash = Leash()
+        self._progress = Progress()
         self._inbox: collections.deque[Callable[[Stamp], bool]] = collections.deque(maxlen=INBOX)
         self._state = State.STANDBY
         self._row: Row | None = None
         self._detail = ''
         self._starting = self._jumping = self._jumped = False
-        self._sent = _REST
+        self._sent: Numbers = REST
+        self._wanted: Numbers = REST
         self._ratio = 1.0
         self._clock: Stamp | None = None
         self._ticked: Stamp | None = None
@@ -93,11 +90,6 @@ class Controller:
     def dropped(self) -> Mapping[Reason, int]:
         """Return how many views were dropped (stamp_zero: restamped) for each reason so far."""
         return self._intake.counts
-
-    @property
-    def points_xy(self) -> Floats | None:
-        """Return the points (N, 2), normalised, that the last solution rests on."""
-        return None if self._solution is None else self._solution.points_xy
 
     def calibrate(self, camera: Camera) -> None:
         """Take the camera the views are measured with; another one while engaged is a fault."""
@@ -160,8 +152,12 @@ class Controller:
         if self._state is State.FAULTED and self._row is not None:
             return Answer(False, f'{self._row.reason.value}: {self._detail}')
         self._jumped = False
-        if self._clock is not None:
-            self._take(self._clock)
+        try:
+            if self._clock is not None:
+                self._take(self._clock)
+        except Exception as error:
+            self._poison(error)
+            return Answer(False, f'{Reason.EXCEPTION.value}: {self._detail}')
         row = gate.verdict(situation := self._situation(self._clock), gate.REFUSING)
         if row is not None:
             return Answer(False, f'{row.reason.value}: {row.sentence(situation)}')
@@ -181,8 +177,7 @@ class Controller:
         self._around.release()
         self._jumped, self._error = False, None
         self._row, self._detail = None, ''
-        for judge in (self._growth, self._stall, self._settling, self._leash):
-            judge.restart()
+        self._progress.restart()
         self._turn(Event.RESET)
         return Answer(True, 'reset; engage to start')
 
@@ -203,7 +198,9 @@ class Controller:
         try:
             if self._error is None:
                 self._decide(now)
-                return self._answer(now, self._figures(now))
+                return self._answer(now, figures(
+                    self._around, self._intake, self._progress, self._solution, now,
+                    ratio=self._ratio))
         except Exception as error:
             self._poison(error)
         return self._answer(now, {})
@@ -212,9 +209,11 @@ class Controller:
         """Stand still until a reset: nothing in here can be trusted any more."""
         self._error = error
         self._row = gate.TABLE[0]
-        self._detail = self._row.sentence(self._blank()._replace(
+        settings = self._settings
+        self._detail = self._row.sentence(Situation(
+            settings.watchdog, settings.heartbeat, settings.output,
             exception=f'{type(error).__name__}: {error}'))
-        self._sent = _REST
+        self._sent = REST
         self._turn(Event.FAULT)
 
     def _decide(self, now: Stamp) -> None:
@@ -223,19 +222,20 @@ class Controller:
             self._jumping, self._jumped = False, True
         duration = 0.0 if self._ticked is None else (now - self._ticked) / SECOND_NS
         self._ticked = self._clock = now
-        self._leash.add(self._sent, duration)
+        self._progress.leash.add(self._sent, duration)
         self._intake.moved(self._sent, duration)
         self._around.tick()
         self._take(now)
         if self._state in ENGAGED:
             if self._starting:
                 self._begin(now)
-            self._solution = self._servo.solve(now)
-            self._watch(now)
+            self._solve(now)
+            if self._solution is not None and self._state in MOVING:
+                self._progress.add(self._solution, self._wanted, now, self._settings)
         situation = self._situation(now)
         self._judge(situation)
         self._move(situation, duration)
-        self._servo.record(self._sent, now)
+        self._servo.record(np.array(self._sent), now)
 
     def _take(self, now: Stamp) -> None:
         """Judge what came, in order of arrival; a loop that is off still shows the error."""
@@ -243,50 +243,20 @@ class Controller:
         while self._inbox:
             fresh |= self._inbox.popleft()(now)
         if fresh and self._state not in ENGAGED:
-            self._solution = self._servo.solve(now)
+            self._solve(now)
+
+    def _solve(self, now: Stamp) -> None:
+        solution = self._solution = self._servo.solve(now)
+        self._wanted = REST if solution is None else solution.twist.tolist()
 
     def _begin(self, now: Stamp) -> None:
         self._starting = False
         self._servo.begin(now)
-        for judge in (self._growth, self._stall, self._settling):
-            judge.restart()
-
-    def _watch(self, now: Stamp) -> None:
-        """Follow the progress of a loop that moves."""
-        solution, settings = self._solution, self._settings
-        if solution is None or self._state not in MOVING:
-            return
-        tolerance = settings.settle.hysteresis * settings.settle.error_px
-        self._growth.add(solution.error_px, now, settings.watchdog.diverging_window)
-        self._stall.add(solution.error_px, now, settings.watchdog, tolerance)
-        self._settling.add(solution.twist / solution.gain, solution.error_px, now, settings.settle)
-
-    def _blank(self) -> Situation:
-        settings = self._settings
-        return Situation(settings.watchdog, settings.heartbeat, settings.output)
+        self._progress.begin()
 
     def _situation(self, now: Stamp | None) -> Situation:
-        settings, around, intake = self._settings, self._around, self._intake
-        solution, seen = self._solution, intake.good is not None
-        none_yet = math.inf if now is None else None
-        return Situation(
-            settings.watchdog, settings.heartbeat, settings.output, halted=around.halted,
-            jumped=self._jumped, calibrated=around.camera is not None and not around.camera_fault,
-            camera_fault=around.camera_fault, camera_changed=around.camera_changed,
-            publishers=around.publishers, listeners=around.listeners,
-            travelled=self._leash.travelled, turned=self._leash.turned, grown=self._growth.ratio,
-            stalled=self._stall.seconds, heartbeat_age=none_yet or age(around.beat, now or 0),
-            bad=intake.bad, bad_text=intake.bad_text, bad_in_a_row=intake.bad_in_a_row,
-            heard_age=none_yet or age(intake.heard, now or 0),
-            good_age=none_yet or age(intake.good, now or 0),
-            image_age=none_yet or age(intake.image, now or 0),
-            law_is_finite=solution is None or bool(np.isfinite(solution.twist).all()),
-            condition=solution.condition if solution is not None else math.inf,
-            smallest=solution.smallest if solution is not None else 0.0,
-            refusal=solution.refusal if solution is not None else '',
-            error_px=solution.error_px if solution is not None else math.nan,
-            crowded=intake.crowded if seen else 0.0, late=around.late,
-            late_in_a_row=around.late_in_a_row)
+        return surveyed(self._settings, self._around, self._intake, self._progress,
+                        self._solution, self._wanted, now, jumped=self._jumped)
 
     def _judge(self, situation: Situation) -> None:
         """Let the gate's verdict, or the loop's progress, turn the state."""
@@ -299,40 +269,41 @@ class Controller:
             if self._state in ENGAGED or row.always:
                 self._turn(_EVENTS[row.reaction])
         elif self._state is State.HOLDING and self._row is not None:
-            if self._intake.good_in_a_row >= self._row.release and not self._sent.any():
+            if self._intake.good_in_a_row >= self._row.release and not any(self._sent):
                 self._starting = True
                 self._turn(Event.RELEASE)
         else:
             self._row, self._detail = row, '' if row is None else row.sentence(situation)
-            self._turn(Event.SETTLE if self._settling.is_home else Event.LEAVE)
+            self._turn(Event.SETTLE if self._progress.settling.is_home else Event.LEAVE)
 
     def _move(self, situation: Situation, duration: float) -> None:
         """Find the twist that goes out, camera in its optical frame."""
         self._ratio = 1.0
         if self._state is State.HOLDING:
             self._sent = self._outlet.braked(self._sent, duration)
-        elif self._state in MOVING and not self._starting and self._solution is not None:
-            wanted = gate.slowdown(situation) * self._solution.twist
+        elif self._state in MOVING and not self._starting:
+            slow = gate.slowdown(situation)
+            wanted = self._wanted if slow == 1.0 else [slow * part for part in self._wanted]
             self._ratio = self._outlet.ratio(wanted)
             self._sent = self._outlet.next(self._sent, wanted,
                                            min(duration, 2.0 / self._settings.rate))
         else:
-            self._sent = _REST
+            self._sent = REST
 
     def _turn(self, event: Event) -> None:
         before, self._state = self._state, states.after(self._state, event)
         if self._state in ENGAGED:
             return
-        self._sent, self._starting = _REST, False
+        self._sent, self._starting = REST, False
         if before in ENGAGED and self._state is State.STANDBY:
-            for judge in (self._growth, self._stall, self._settling, self._leash):
-                judge.restart()
+            self._progress.restart()
 
     def _forget(self) -> None:
         self._inbox.clear()
         self._intake.forget()
         self._servo.reset()
         self._clock = self._ticked = self._solution = None
+        self._wanted = REST
 
     def _answer(self, now: Stamp, figures: Mapping[str, float]) -> Command:
         row, solution, camera = self._row, self._solution, self._around.camera
@@ -340,15 +311,3 @@ class Controller:
         return Command(Twist(self._outlet.expressed(self._sent), frame), self._state,
                        Reason.NONE if row is None else row.reason, self._detail, now,
                        None if solution is None else solution.view_stamp, figures)
-
-    def _figures(self, now: Stamp) -> Mapping[str, float]:
-        solution = self._solution
-        figures = {'ratio': self._ratio, 'travelled': self._leash.travelled,
-                   'turned': self._leash.turned, 'good_views': float(self._intake.good_in_a_row),
-                   'late_ticks': float(self._around.late_in_a_row)}
-        if solution is not None:
-            figures.update(error_px=solution.error_px, condition=solution.condition,
-                           smallest=solution.smallest, points=float(solution.points),
-                           gain=solution.gain, left=solution.left,
-                           latency_ms=1e3 * age(solution.view_stamp, now))
-        return figures

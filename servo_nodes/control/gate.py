@@ -15,48 +15,11 @@ import math
 import typing
 from collections.abc import Callable
 
-from servo_nodes.control.settings import HeartbeatSettings, OutputSettings, WatchdogSettings
+from servo_nodes.control.situation import Situation
 from servo_nodes.values import Reason
 
 GOOD_VIEWS = 3
-
-
-class Situation(typing.NamedTuple):
-    """Everything the gate judges, at one moment; the defaults are those of a loop at its best.
-
-    Ages and silences are seconds, infinite where there never was anything.
-    """
-
-    watchdog: WatchdogSettings
-    heartbeat: HeartbeatSettings
-    output: OutputSettings
-    exception: str = ''
-    halted: bool = False
-    jumped: bool = False
-    calibrated: bool = True
-    camera_fault: str = ''
-    camera_changed: str = ''
-    publishers: int = 1
-    listeners: int = 1
-    travelled: float = 0.0
-    turned: float = 0.0
-    grown: float = 1.0
-    stalled: float = 0.0
-    heartbeat_age: float = 0.0
-    bad: Reason = Reason.NONE
-    bad_text: str = ''
-    bad_in_a_row: int = 0
-    heard_age: float = 0.0
-    good_age: float = 0.0
-    image_age: float = 0.0
-    law_is_finite: bool = True
-    condition: float = 1.0
-    smallest: float = 1.0
-    refusal: str = ''
-    error_px: float = 0.0
-    crowded: float = 0.0
-    late_in_a_row: int = 0
-    late: float = 0.0
+ONLY_WHEN_IT_LASTS = 1_000_000_000
 
 
 class Reaction(enum.Enum):
@@ -254,7 +217,7 @@ TABLE: tuple[Row, ...] = (
     _row(Reason.FEATURES_SILENT, _features_silent, _HOLD, sentence=lambda s: (
         f'no features {_seconds(s.heard_age)}, at most {s.watchdog.timeout:g} s allowed; check '
         'that the tracker runs and gets images')),
-    _drop_row(Reason.IMAGE_SILENT, 1000, 'check the camera and its driver'),
+    _drop_row(Reason.IMAGE_SILENT, ONLY_WHEN_IT_LASTS, 'check the camera and its driver'),
     _drop_row(Reason.FEATURES_STALE, 1, 'shorten the way from camera to tracker, or raise '
               'watchdog.staleness'),
     _row(Reason.FEATURES_STALE, _too_old, _HOLD, sentence=lambda s: (

@@ -5,12 +5,13 @@
 from __future__ import annotations
 
 import math
+import typing
 
-import numpy as np
-
-from servo_nodes.control.settings import SettleSettings, WatchdogSettings
+from servo_nodes.control.servo import Solution
+from servo_nodes.control.settings import ControllerSettings, SettleSettings, WatchdogSettings
+from servo_nodes.control.travel import Leash
 from servo_nodes.control.watch import age
-from servo_nodes.values import SECOND_NS, Floats, Stamp
+from servo_nodes.values import Stamp
 
 PARTS = 4
 LEAST_STEP = 1.05
@@ -83,36 +84,61 @@ class Settling:
 
     def restart(self) -> None:
         """Start to judge anew."""
-        self._mean: Floats | None = None
+        self._mean: list[float] = []
         self._last: Stamp = 0
         self._within: Stamp | None = None
         self.is_home = False
 
-    def add(self, motion: Floats, error_px: float, now: Stamp, settings: SettleSettings) -> None:
+    def add(self, motion: typing.Sequence[float], error_px: float, now: Stamp,
+            settings: SettleSettings) -> None:
         """Take what is left at `now`.
 
         Parameters
         ----------
-        motion : (6,), m and rad, the way that the law still asks for: its twist over its gain
+        motion : 6 numbers, m and rad, the way that the law still asks for: its twist over its gain
         error_px : float
         now : int, ns
         settings : SettleSettings
         """
-        sample = np.append(motion, error_px)
-        if self._mean is None or now < self._last:
-            self._mean = sample
-        else:
-            share = -math.expm1(-(now - self._last) / SECOND_NS / max(settings.smoothing, 1e-9))
-            self._mean = self._mean + share * (sample - self._mean)
-        self._last = now
+        sample = [*motion, error_px]
+        if self._mean and now >= self._last:
+            share = -math.expm1(-age(self._last, now) / max(settings.smoothing, 1e-9))
+            sample = [old + share * (new - old)
+                      for old, new in zip(self._mean, sample, strict=True)]
+        self._mean, self._last = sample, now
         factor = settings.hysteresis if self.is_home else 1.0
-        m = self._mean.tolist()
-        small = (math.hypot(m[0], m[1], m[2]) <= factor * settings.linear
-                 and math.hypot(m[3], m[4], m[5]) <= factor * settings.angular
-                 and m[6] <= factor * settings.error_px)
-        if not small:
+        if not (math.hypot(*sample[:3]) <= factor * settings.linear
+                and math.hypot(*sample[3:6]) <= factor * settings.angular
+                and sample[6] <= factor * settings.error_px):
             self._within, self.is_home = None, False
             return
         if self._within is None:
             self._within = now
         self.is_home = self.is_home or age(self._within, now) >= settings.duration
+
+
+class Progress:
+    """All that is followed while the loop moves, and the leash."""
+
+    def __init__(self) -> None:
+        self.growth, self.stall, self.settling = Growth(), Stall(), Settling()
+        self.leash = Leash()
+
+    def begin(self) -> None:
+        """Judge anew from here, motion starts from rest; the leash stays tied."""
+        self.growth.restart()
+        self.stall.restart()
+        self.settling.restart()
+
+    def restart(self) -> None:
+        """Judge anew and tie the leash here."""
+        self.begin()
+        self.leash.restart()
+
+    def add(self, solution: Solution, twist: typing.Sequence[float], now: Stamp,
+            settings: ControllerSettings) -> None:
+        """Take what a moving loop knows at `now`; `twist` is the solution's, as 6 numbers."""
+        watchdog, settle = settings.watchdog, settings.settle
+        self.growth.add(solution.error_px, now, watchdog.diverging_window)
+        self.stall.add(solution.error_px, now, watchdog, settle.hysteresis * settle.error_px)
+        self.settling.add([part / solution.gain for part in twist], solution.error_px, now, settle)

@@ -87,7 +87,7 @@ class WatchdogSettings(Checked):
         1e-3, low=1e-9, high=1.0,
         help='least singular value of the law; below it a direction of motion cannot be seen')
     frozen: float = setting(
-        0.5, unit='s', low=0.1, high=10.0,
+        0.25, unit='s', low=0.1, high=10.0,
         help='how long the points may stay exactly the same while the camera is moved')
     border: float = setting(
         0.04, low=0.0, high=0.3,
