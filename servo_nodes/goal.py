@@ -3,9 +3,9 @@
 """The taught view: what the camera must come back to, in memory and as a folder.
 
 A goal on disk is a folder: `goal.yaml` (camera, plane, how it was taught, what was checked),
-`view.png` (8 bit, grey) and, when the depth was measured, `depth.png` (16 bit, mm, 0 = unknown). It is
-meant to be read, compared and mailed: nothing in it can run, and every size is bounded before it is
-unpacked.
+`view.png` (8 bit, grey) and, when the depth was measured, `depth.png` (16 bit, mm, 0 = unknown).
+It is meant to be read, compared and mailed: nothing in it can run, and every size is bounded
+before it is unpacked.
 """
 
 from __future__ import annotations
@@ -38,10 +38,10 @@ class Goal:
     ----------
     view : (height, width), uint8, grey
     camera : Camera, which took it
-    plane : (4,), nx, ny, nz, d of the target's plane n . X = d in the optical frame, |n| = 1, d > 0, m
-    depth : (height, width), float32, m, NaN where unknown; None when only the plane is known
-    taught : str, how: by whom, from what
-    checks : mapping, what was judged when it was taught: plain numbers and words
+    plane : (4,), nx, ny, nz, d of the target's plane n . X = d in the optical frame, |n| = 1, d >
+        0, m depth : (height, width), float32, m, NaN where unknown; None when only the plane is
+        known taught : str, how: by whom, from what checks : mapping, what was judged when it was
+        taught: plain numbers and words
     """
 
     view: npt.NDArray[np.uint8]
@@ -55,8 +55,8 @@ class Goal:
         view = np.array(self.view)
         size = (self.camera.height, self.camera.width)
         if view.dtype != np.uint8 or view.shape != size:
-            raise ValueError(f'view: expected grey uint8 of {size[1]}x{size[0]} px as the camera has, '
-                             f'got {view.dtype} of shape {view.shape}')
+            raise ValueError(f'view: expected grey uint8 of {size[1]}x{size[0]} px as the camera '
+                             f'has, got {view.dtype} of shape {view.shape}')
         if not (LEAST_SIDE_PX <= min(size) and max(size) <= MOST_SIDE_PX):
             raise ValueError(f'view: expected {LEAST_SIDE_PX} to {MOST_SIDE_PX} px a side, '
                              f'got {size[1]}x{size[0]}')
@@ -73,7 +73,7 @@ class Goal:
 
 
 def save(goal: Goal, folder: str | pathlib.Path) -> None:
-    """Write a goal into `folder`, which is made when absent; a former goal there is replaced.
+    """Write a goal into `folder`, made when absent; a former goal there is replaced.
 
     Raises
     ------
@@ -100,7 +100,8 @@ def load(folder: str | pathlib.Path) -> Goal:
     Raises
     ------
     ValueError
-        One sentence that names the file, for anything absent, malformed, contradictory or too large.
+        One sentence that names the file, for anything absent, malformed, contradictory or too
+        large.
     """
     folder = pathlib.Path(folder)
     path = folder / 'goal.yaml'
@@ -123,7 +124,7 @@ def load(folder: str | pathlib.Path) -> Goal:
 
 
 def png_size(data: bytes) -> tuple[int, int] | None:
-    """Return (width, height), px, that a PNG announces in its head; None when it is no PNG."""
+    """Return (width, height), px, that a PNG announces in its head; None for no PNG."""
     if len(data) < 24 or data[:8] != _PNG_HEAD:
         return None
     return int.from_bytes(data[16:20], 'big'), int.from_bytes(data[20:24], 'big')
@@ -132,7 +133,7 @@ def png_size(data: bytes) -> tuple[int, int] | None:
 def _checked_plane(plane: npt.ArrayLike) -> Floats:
     numbers: Floats = np.array(plane, dtype=np.float64)
     if numbers.shape != (4,) or not np.isfinite(numbers).all():
-        raise ValueError(f'plane: expected four finite numbers nx, ny, nz, d, got {plane}')
+        raise ValueError(f'plane: expected four finite numbers nx, ny, nz, d, got {numbers.tolist()}')
     length = float(np.linalg.norm(numbers[:3]))
     if not (0.99 < length < 1.01 and 1e-3 <= numbers[3] <= 1e3):
         raise ValueError('plane: expected a unit normal and a distance from 0.001 to 1000 m, '
@@ -186,7 +187,8 @@ def _part(page: Mapping[str, typing.Any], name: str, kind: type | tuple[type, ..
     value = page.get(name)
     if not isinstance(value, kind) or isinstance(value, bool):
         kinds = kind if isinstance(kind, tuple) else (kind,)
-        raise ValueError(f'{name}: expected {" or ".join(k.__name__ for k in kinds)}, got {value!r:.60}')
+        words = ' or '.join(kind.__name__ for kind in kinds)
+        raise ValueError(f'{name}: expected {words}, got {value!r:.60}')
     return value
 
 
@@ -215,8 +217,8 @@ def _read_png(path: pathlib.Path, dtype: np.dtype[typing.Any],
     if size is None:
         raise ValueError(f'{path.name}: expected a PNG picture, got something else')
     if size != camera.size:
-        raise ValueError(f'{path.name}: expected {camera.width}x{camera.height} px as the camera has, '
-                         f'got {size[0]}x{size[1]}')
+        raise ValueError(f'{path.name}: expected {camera.width}x{camera.height} px as the camera '
+                         f'has, got {size[0]}x{size[1]}')
     if max(size) > MOST_SIDE_PX:
         raise ValueError(f'{path.name}: expected at most {MOST_SIDE_PX} px a side, '
                          f'got {size[0]}x{size[1]}')

@@ -2,19 +2,23 @@
 # SPDX-License-Identifier: Apache-2.0
 """When do points that agree mean that the goal is seen? The rule of acceptance.
 
-Two questions, each answered by the expected number of times chance would do as well (Desolneux, Moisan &
-Morel, From Gestalt Theory to Image Analysis, 2008; Moisan & Stival, IJCV 57, 2004; formulas from memory):
+Two questions, each answered by the expected number of times chance would do as well (Desolneux,
+Moisan & Morel, From Gestalt Theory to Image Analysis, 2008; Moisan & Stival, IJCV 57, 2004;
+formulas from memory):
 
-* *Keypoints.* Of n pairs, k lie within eps px of where a homography through 4 of them puts them. A wrong
-  pair does so with probability alpha = pi eps^2 / area of the image, so chance is expected to manage
+* *Keypoints.* Of n pairs, k lie within eps px of where a homography through 4 of them puts them. A
+  wrong pair does so with probability alpha = pi eps^2 / area of the image, so chance is expected
+  to manage
 
       (n - 4) C(n, k) C(k, 4) alpha^(k - 4)   times.
 
-* *Pixels.* Of the m goal points that should be in the image, v were verified: their patch, registered
-  there, is like the goal's and lies where the others put it. A wrong patch passes with a probability of
-  at most BY_CHANCE (measured on wrong pictures: below 0.01), so chance manages P(Binomial(m, BY_CHANCE) >= v).
+* *Pixels.* Of the m goal points that should be in the image, v were verified: their patch,
+  registered there, is like the goal's and lies where the others put it. A wrong patch passes with
+  a probability of at most BY_CHANCE (measured on wrong pictures: below 0.01), so chance manages
+  P(Binomial(m, BY_CHANCE) >= v).
 
-Both must be below ONCE_IN, the verified must be enough, a fair share of what should be seen, and spread.
+Both must be below 10^LOG10_ONCE_IN, the verified must be enough, a fair share of what should be
+seen, and spread.
 """
 
 from __future__ import annotations
@@ -27,9 +31,11 @@ import numpy.typing as npt
 
 from servo_nodes.values import Floats
 
-ONCE_IN = 1e-6
+LOG10_ONCE_IN = -6.0
 BY_CHANCE = 0.03
 LEAST_SHARE = 0.25
+# Standard deviation of the verified points along their narrow direction, in image heights.
+LEAST_SPREAD = 0.03
 _ROUNDS, _CONFIDENCE = 3000, 0.999
 
 
@@ -43,7 +49,7 @@ def log10_alarms(pairs: int, agreeing: int, threshold_px: float, area_px: float)
 
 
 def log10_chance(expected: int, verified: int) -> float:
-    """Return log10 of the chance that `verified` of `expected` wrong patches pass; see the head."""
+    """Return log10 of the chance that so many of the expected wrong patches pass."""
     if not 0 < verified <= expected:
         return 0.0
     terms = [_log10_choose(expected, j) + j * math.log10(BY_CHANCE)

@@ -2,14 +2,15 @@
 # SPDX-License-Identifier: Apache-2.0
 """Depths of points: from the goal's plane or map, or from a depth image with its holes and edges.
 
-On the plane n . X = d a ray (x, y, 1) has the depth Z = d / (n . (x, y, 1)). Depth cameras invent points
-between a near and a far surface ("flying pixels") and lose others: a depth counts when the
+On the plane n . X = d a ray (x, y, 1) has the depth Z = d / (n . (x, y, 1)). Depth cameras invent
+points between a near and a far surface ("flying pixels") and lose others: a depth counts when the
 neighbourhood holds enough values and they agree.
 """
 
 from __future__ import annotations
 
 import typing
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -67,14 +68,57 @@ def depths_of_goal(goal: Goal, uv: Floats, xy: Floats) -> Floats:
     return depths_on_plane(goal.plane, xy)
 
 
+@dataclass(frozen=True, eq=False)
+class Depths:
+    """Depths now and in the goal, (N,), m, NaN where unknown, and where they come from."""
+
+    now: Floats
+    goal: Floats
+    source: str
+
+
+def chosen(source: str, *, ratios: Floats, goal: Floats, constant: float, found: Floats | None,
+           measured: Floats | None) -> Depths:
+    """Choose each point's depth by `source`, a word of `depth.source`.
+
+    Parameters
+    ----------
+    ratios : (N,), depth now over depth in the goal, by the change of the view
+    goal : (N,), m, depth in the goal
+    constant : float, m, `teach.distance`
+    found : (N,), m, what the finder measured (marker size), or None
+    measured : (N,), m, from a depth image, or None
+    """
+    unknown = np.full(len(ratios), np.nan)
+    if source == 'none':
+        return Depths(unknown, unknown, 'none')
+    if source == 'constant':
+        fixed = np.full(len(ratios), constant)
+        return Depths(fixed, fixed, 'constant')
+    options = {'image': measured, 'marker': found, 'goal': goal * ratios}
+    wanted = {'auto': ('image', 'marker', 'goal'), 'image': ('image',),
+              'goal': ('marker', 'goal')}[source]
+    now, words = unknown, []
+    for name in wanted:
+        value = options[name]
+        missing = np.isnan(now)
+        if value is None or not missing.any():
+            continue
+        now = np.where(missing, value, now)
+        count = int(np.count_nonzero(missing & np.isfinite(now)))
+        if count:
+            words.append(f'{name} {count}')
+    return Depths(now, goal, ', '.join(words) or 'none')
+
+
 def plane_in_depth(metres: Metres, xy: Floats, uv: Floats) -> tuple[Floats, float] | None:
     """Fit n . X = d to the depths at rays `xy` (N, 2), pixels `uv`.
 
     Returns
     -------
     (plane, deviation) or None
-        The plane (4,) and the median distance of the points from it, m; None for fewer than six known
-        depths or a plane that does not face the camera.
+        The plane (4,) and the median distance of the points from it, m; None for fewer than six
+        known depths or a plane that does not face the camera.
     """
     depths = depths_in_image(metres, uv)
     known = np.isfinite(depths)

@@ -1,11 +1,12 @@
 # Copyright 2026 servo_nodes maintainers
 # SPDX-License-Identifier: Apache-2.0
-"""Following: where the goal's points went since the last image, and holding them to the goal itself.
+"""Following: where the goal's points went since the last image, held to the goal itself.
 
-Two steps an image. *Carried*: pyramidal Lucas-Kanade (Bouguet 2000) from the last image to this one,
-forward and back (Kalal, Mikolajczyk & Matas, ICPR 2010), says roughly where the view is now. *Verified*:
-every point of the goal that should be visible is registered against the goal view itself, so errors do
-not add up, and points that were lost or hidden return by themselves under their old number.
+Two steps an image. *Carried*: pyramidal Lucas-Kanade (Bouguet 2000) from the last image to this
+one, forward and back (Kalal, Mikolajczyk & Matas, ICPR 2010), says roughly where the view is now.
+*Verified*: every point of the goal that should be visible is registered against the goal view
+itself, so errors do not add up, and points that were lost or hidden return by themselves under
+their old number.
 """
 
 from __future__ import annotations
@@ -24,11 +25,13 @@ from servo_nodes.tracking.pictures import Grey
 from servo_nodes.tracking.reference import Reference
 from servo_nodes.values import Floats
 
+# What the stubs of OpenCV say differs between its releases, and in part is wrong.
+_cv: typing.Any = cv2
 Index = npt.NDArray[np.intp]
 
-WINDOW, LEVELS = (13, 13), 2
-_STOP = (cv2.TERM_CRITERIA_COUNT | cv2.TERM_CRITERIA_EPS, 12, 0.03)
-_MOST_RETURN_PX = 0.5
+WINDOW, LEVELS = (13, 13), 3
+_STOP = (_cv.TERM_CRITERIA_COUNT | _cv.TERM_CRITERIA_EPS, 12, 0.03)
+_MOST_RETURN_PX, _AGREE_PX, _LEAST_CARRIED = 0.5, 2.0, 6
 _FLOOR_PX = 0.03
 
 
@@ -41,18 +44,22 @@ class Sight:
     matrix : (3, 3), normed homography from goal to image, normalised coordinates
     index : (M,), the points seen
     uv, xy : (M, 2), px and normalised
+    to_normalised : (M, 2, 2), d(x, y)/d(u, v) of the lens there
     weights : (M,), 0..1
     residual_px : float, median distance from where the homography puts them
     expected : int, how many goal points should be in the image
+    depths : (M,), m, where the finder measured them itself (size of a marker); else None
     """
 
     matrix: Floats
     index: Index
     uv: Floats
     xy: Floats
+    to_normalised: Floats
     weights: Floats
     residual_px: float
     expected: int
+    depths: Floats | None = None
 
     def __len__(self) -> int:
         return len(self.index)
@@ -60,39 +67,34 @@ class Sight:
 
 @dataclass(frozen=True, eq=False)
 class Limits:
-    """What a verified point must satisfy: correlation, and distance from the others' opinion, px."""
+    """What a verified point satisfies: correlation, and distance from the common model, px."""
 
     likeness: float
     residual_px: float
 
 
-def halved(grey: Grey) -> Grey:
-    """Return the image at half its size: pixel u there is 2 u here."""
-    return typing.cast(Grey, cv2.pyrDown(grey))
-
-
 def carried(reference: Reference, camera: Camera, last: Sight, before: Grey,
             now: Grey) -> Floats | None:
-    """Return the homography goal -> image after following the last points; None when they are lost.
+    """Return the homography goal -> image after following the last points from `before` to `now`.
 
-    `before` and `now` are the last image and this one, `halved`: enough to start from, a quarter of
-    the work.
+    Returns None when too few return to where they came from, or agree.
     """
-    start = (last.uv / 2).astype(np.float32)
-    there, found, _ = cv2.calcOpticalFlowPyrLK(
+    start = last.uv.astype(np.float32)
+    there, found, _ = _cv.calcOpticalFlowPyrLK(
         before, now, start, None, winSize=WINDOW, maxLevel=LEVELS, criteria=_STOP)
-    back, found_back, _ = cv2.calcOpticalFlowPyrLK(
+    back, found_back, _ = _cv.calcOpticalFlowPyrLK(
         now, before, there, None, winSize=WINDOW, maxLevel=LEVELS, criteria=_STOP)
-    uv = 2 * np.asarray(there, dtype=np.float64).reshape(-1, 2)
-    gap = np.asarray(back).reshape(-1, 2) - start
-    kept = (np.asarray(found).reshape(-1) & np.asarray(found_back).reshape(-1)).astype(bool)
-    kept &= np.einsum('ni,ni->n', gap, gap) < _MOST_RETURN_PX ** 2
-    if kept.sum() < 6:
+    uv = np.asarray(there, dtype=np.float64).reshape(-1, 2)
+    gap = np.abs(np.asarray(back).reshape(-1, 2) - start).max(-1)
+    kept = np.flatnonzero((gap < _MOST_RETURN_PX) & (np.asarray(found).reshape(-1) > 0)
+                          & (np.asarray(found_back).reshape(-1) > 0))
+    if len(kept) < _LEAST_CARRIED:
         return None
-    lens = camera.pixel_jacobian(last.xy[kept])
-    xy = _normalised(camera, uv[kept], last.uv[kept], last.xy[kept], lens)
-    plane = plane_through(reference.xy[last.index[kept]], xy, 2.0 / camera.fx)
-    if plane is None or plane[1].sum() < 6:
+    # The lens is linearised where the point was: near enough for a first guess.
+    moved = uv[kept] - last.uv[kept]
+    xy = last.xy[kept] + (last.to_normalised[kept] @ moved[:, :, None])[:, :, 0]
+    plane = plane_through(reference.xy[last.index[kept]], xy, _AGREE_PX / camera.fx)
+    if plane is None or np.count_nonzero(plane[1]) < _LEAST_CARRIED:
         return None
     return homography.normed(plane[0], reference.xy[last.index])
 
@@ -115,9 +117,10 @@ def verified(reference: Reference, camera: Camera, grey: Grey, matrix: Floats, l
     if len(alike) < 4:
         return None
     kept, uv = index[alike], found.uv[alike]
-    xy = _normalised(camera, uv, guess[alike], guess_xy[alike], lens[alike])
+    inverse = _inverse_2x2(lens[alike])
+    xy = _normalised(camera, uv, guess[alike], guess_xy[alike], inverse)
     goal_xy = reference.xy[kept]
-    fit = homography.robust_fit(goal_xy, xy, matrix, floor=_FLOOR_PX / camera.fx, rounds=rounds)
+    fit = homography.robust_fit(goal_xy, xy, matrix, floor=_FLOOR_PX / camera.fx, rounds=2)
     if fit is None:
         return None
     good = np.flatnonzero((fit.residuals * camera.fx <= limits.residual_px) & (fit.weights > 0))
@@ -126,21 +129,30 @@ def verified(reference: Reference, camera: Camera, grey: Grey, matrix: Floats, l
     normed = homography.normed(fit.matrix, goal_xy[good])
     if normed is None or not homography.plausible(normed, goal_xy[good]):
         return None
-    return Sight(normed, kept[good], uv[good], xy[good], fit.weights[good],
-                 float(np.median(fit.residuals[good]) * camera.fx), len(index))
+    return Sight(normed, kept[good], uv[good], xy[good], inverse[good], fit.weights[good],
+                 homography.middle(fit.residuals[good]) * camera.fx, len(index))
 
 
 def _normalised(camera: Camera, uv: Floats, near_uv: Floats, near_xy: Floats,
-                lens: Floats) -> Floats:
+                inverse: Floats) -> Floats:
     """Return normalised coordinates of pixels that lie a few px from known ones.
 
-    Two steps of Newton's method on the Jacobian `lens` at those: the rest is of the third order in the
-    distance over the focal length, far below a thousandth of a pixel.
+    Two steps of Newton's method with the inverse Jacobian of the lens at those: what is left is of
+    the third order in the distance over the focal length, far below a thousandth of a pixel.
     """
-    inverse = np.linalg.inv(lens)
     xy = near_xy + (inverse @ (uv - near_uv)[:, :, None])[:, :, 0]
     missing = uv - camera.pixels_from_normalised(xy)
     return typing.cast(Floats, xy + (inverse @ missing[:, :, None])[:, :, 0])
+
+
+def _inverse_2x2(matrix: Floats) -> Floats:
+    # Several times as fast as the general inverse for stacks of this size.
+    inverse = np.empty_like(matrix)
+    inverse[:, 0, 0], inverse[:, 1, 1] = matrix[:, 1, 1], matrix[:, 0, 0]
+    inverse[:, 0, 1], inverse[:, 1, 0] = -matrix[:, 0, 1], -matrix[:, 1, 0]
+    determinant = matrix[:, 0, 0] * matrix[:, 1, 1] - matrix[:, 0, 1] * matrix[:, 1, 0]
+    inverse /= determinant[:, None, None]
+    return inverse
 
 
 def _within(uv: Floats, camera: Camera) -> npt.NDArray[np.bool_]:

@@ -3,17 +3,17 @@
 """The map of a plane between two views, in normalised coordinates.
 
 With X_c = R X_g + t the motion of a point from the goal's optical frame to the current one and the
-plane n . X_g = d, every point of the plane obeys X_c = (R + t n^T / d) X_g = H X_g. With X = Z (x, y, 1):
+plane n . X_g = d, every point of it obeys X_c = (R + t n^T / d) X_g = H X_g. With X = Z (x, y, 1):
 
     Z_c (x_c, 1) = Z_g H (x_g, 1)   =>   x_c = pi(H (x_g, 1)),   Z_c / Z_g = (H (x_g, 1))_3.
 
-A homography found from points is known up to a factor; the true one has its middle singular value equal
-to 1 (the direction orthogonal to n and to R^T t is only turned), and a positive depth fixes the sign.
-So the ratio of depths needs neither R, t nor n: only H. Source: Faugeras & Lustman 1988; Ma, Soatto,
-Kosecka & Sastry, An Invitation to 3-D Vision, 2004, ch. 5.3 (from memory, re-derived).
+A homography found from points is known up to a factor; the true one has its middle singular value
+equal to 1 (the direction orthogonal to n and to R^T t is only turned), and a positive depth fixes
+the sign. So the ratio of depths needs neither R, t nor n: only H. Source: Faugeras & Lustman 1988;
+Ma, Soatto, Kosecka & Sastry, An Invitation to 3-D Vision, 2004, ch. 5.3 (from memory, re-derived).
 
-The robust fit minimises sum w |x_c - pi(H x_g)|^2 by iterated linear least squares on the eight free
-numbers, with Tukey's weights (c = 4.685; 95 % efficient for Gaussian noise).
+The robust fit minimises sum w |x_c - pi(H x_g)|^2 by iterated linear least squares on the eight
+free numbers, with Tukey's weights (c = 4.685; 95 % efficient for Gaussian noise).
 """
 
 from __future__ import annotations
@@ -33,12 +33,18 @@ _RAYLEIGH_MEDIAN = 1.17741
 
 @dataclass(frozen=True, eq=False)
 class Fit:
-    """A robust homography: `matrix` (3, 3), `weights` (N,) 0..1, `residuals` (N,) in input units."""
+    """A robust homography `matrix` (3, 3), with `weights` 0..1 and `residuals` (N,)."""
 
     matrix: Floats
     weights: Floats
     residuals: Floats
     scale: float
+
+
+def middle(numbers: Floats) -> float:
+    """Return the upper median of numbers (N,): a tenth of the time of `np.median`."""
+    half = len(numbers) // 2
+    return float(np.partition(numbers, half)[half])
 
 
 def mapped(matrix: Floats, xy: Floats) -> Floats:
@@ -58,13 +64,13 @@ def mapped_and_jacobian(matrix: Floats, xy: Floats) -> tuple[Floats, Floats]:
 
 
 def normed(matrix: Floats, xy: Floats) -> Floats | None:
-    """Return H with middle singular value 1 and positive depths at `xy`; None when it is no view."""
+    """Return H with middle singular value 1, positive at `xy`; None when it is no view."""
     singular = np.linalg.svd(matrix, compute_uv=False)
     if not (np.isfinite(singular).all() and singular[2] > 1e-6 * singular[0]):
         return None
     scaled = matrix / singular[1]
     depths = xy @ scaled[2, :2] + scaled[2, 2]
-    if np.median(depths) < 0:
+    if depths[0] < 0:
         scaled, depths = -scaled, -depths
     return typing.cast(Floats, scaled) if (depths > 0).all() else None
 
@@ -100,7 +106,7 @@ def robust_fit(goal_xy: Floats, xy: Floats, start: Floats | None = None, *, floo
     Parameters
     ----------
     goal_xy, xy : (N, 2), normalised
-    start : (3, 3), a first guess, against which the first residuals are taken; None: all count alike
+    start : (3, 3), a first guess for the first residuals; None: all count alike
     floor : float
         Least standard deviation believed, in the unit of `xy`: half the residuals may be equal.
     trust : (N,), prior weights
@@ -136,8 +142,7 @@ def _weighed(matrix: Floats, goal_xy: Floats, xy: Floats,
     difference = mapped(matrix, goal_xy) - xy
     residuals = np.hypot(difference[:, 0], difference[:, 1])
     residuals[np.isnan(residuals)] = np.inf
-    middle = len(residuals) // 2
-    scale = max(float(np.partition(residuals, middle)[middle]) / _RAYLEIGH_MEDIAN, floor)
+    scale = max(middle(residuals) / _RAYLEIGH_MEDIAN, floor)
     u = np.minimum(residuals / (TUKEY * scale), 1.0)
     return (1 - u * u) ** 2, residuals, scale
 

@@ -31,7 +31,7 @@ class TeachOptions(Checked):
         help='Distance of the target plane along the optical axis at the goal, used when no depth '
         'image is there. Wrong by a factor: the approach is that factor too fast or too slow.')
     least_points: int = setting(
-        30, low=8, high=500, help='Fewer usable points than this and the view is refused.')
+        30, low=8, high=500, help='Fewer usable points and the view is refused.')
     accept_warnings: bool = setting(
         True, help='Take a view that is usable but poor (the answer says why); false refuses it.')
 
@@ -41,12 +41,12 @@ class DetectorOptions(Checked):
     """How the goal is found in an image."""
 
     kind: str = setting('orb', choices=('orb', 'sift', 'marker'),
-                        help='orb: fast, for most textures. sift: slower, for hard ones. marker: '
-                        'fiducials of the marker group, nothing else.')
+                        help='orb: fast, for most textures. sift: slower, for hard ones. '
+                        'marker: fiducials of the marker group, nothing else.')
     features: int = setting(1000, low=100, high=10000,
                             help='Most keypoints described per image; more finds poorer views and '
                             'costs time while searching, not while following.')
-    points: int = setting(120, low=12, high=500, help='Most points followed, spread over the view.')
+    points: int = setting(120, low=12, high=500, help='Most points followed, spread out.')
 
 
 @dataclass(frozen=True)
@@ -67,13 +67,13 @@ class ConsensusOptions(Checked):
     """When points agree well enough to be believed."""
 
     kind: str = setting('auto', choices=('auto', 'plane', 'relief'),
-                        help='plane: one homography. relief: epipolar geometry, for castings and the '
-                        'like. auto: a plane unless the points contradict it.')
+                        help='plane: one homography. relief: epipolar geometry, for castings and '
+                        'the like. auto: a plane unless the points contradict it.')
     threshold_px: float = setting(
         3.0, unit='px', low=0.3, high=20.0,
         help='Distance from the model within which a keypoint agrees while searching.')
     acquire_points: int = setting(
-        16, low=8, high=200, help='Points that must be verified in the image to take it for the goal.')
+        16, low=8, high=200, help='Points to be verified in an image to take it for the goal.')
     keep_points: int = setting(
         10, low=6, high=200, help='Points below which a goal that was being followed is lost.')
 
@@ -84,8 +84,8 @@ class FollowOptions(Checked):
 
     likeness: float = setting(
         0.8, low=0.3, high=0.99,
-        help='Least correlation of a point\'s patch with the goal view; lower keeps points in blur, '
-        'and lets half-covered ones pass.')
+        help="Least correlation of a point's patch with the goal view; lower keeps points in "
+        'blur, and lets half-covered ones pass.')
     residual_px: float = setting(
         1.0, unit='px', low=0.1, high=10.0,
         help='Largest distance of a delivered point from where the others put it.')
@@ -97,8 +97,8 @@ class DepthOptions(Checked):
 
     source: str = setting(
         'auto', choices=('auto', 'goal', 'image', 'constant', 'none'),
-        help='goal: the taught plane or map through the view\'s change. image: the depth image. auto: '
-        'the image where it knows, else the goal. constant: teach.distance. none: NaN.')
+        help="goal: the taught plane or map through the view's change. image: the depth image. "
+        'auto: the image where it knows, else the goal. constant: teach.distance. none: NaN.')
 
 
 @dataclass(frozen=True)

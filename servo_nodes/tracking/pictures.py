@@ -33,8 +33,8 @@ _LUMINANCE = {'yuv422': 1, 'uyvy': 1, 'yuv422_yuy2': 0, 'yuyv': 0}
 def grey_from_image(image: Image) -> Grey:
     """Return grey pixels (height, width), uint8, contiguous.
 
-    Sixteen-bit pixels are shifted by the fewest whole bits that bring their brightest thousandth into
-    eight: sensors of 10 or 12 bits use only the lower part of the word.
+    Sixteen-bit pixels are shifted by the fewest whole bits that bring their brightest thousandth
+    into eight: sensors of 10 or 12 bits use only the lower part of the word.
 
     Raises
     ------
@@ -75,7 +75,8 @@ def metres_from_depth(image: Image) -> Metres:
     elif image.encoding == '32FC1':
         metres = _checked(image.array, np.float32, 2, image.encoding).astype(np.float32)
     else:
-        raise ValueError(f'depth encoding: expected 16UC1 (mm) or 32FC1 (m), got {image.encoding!r}')
+        raise ValueError('depth encoding: expected 16UC1 (mm) or 32FC1 (m), '
+                         f'got {image.encoding!r}')
     with np.errstate(invalid='ignore'):
         metres[~((metres > 0) & (metres < 1e3))] = np.nan
     return typing.cast(Metres, metres)
@@ -97,7 +98,7 @@ def image_from_bytes(data: bytes | bytearray | memoryview, stamp: Stamp, frame_i
         raise ValueError('compressed image: expected JPEG or PNG, got something else')
     _check_size((size[1], size[0]))
     try:
-        pixels = cv2.imdecode(np.frombuffer(data, np.uint8),
+        pixels: typing.Any = cv2.imdecode(np.frombuffer(data, np.uint8),
                               cv2.IMREAD_ANYDEPTH | cv2.IMREAD_ANYCOLOR)
     except cv2.error:
         pixels = None
@@ -134,7 +135,8 @@ def _check_size(shape: tuple[int, ...]) -> None:
     fits = len(shape) >= 2 and all(LEAST_SIDE_PX <= side <= MOST_SIDE_PX for side in shape[:2])
     if not fits:
         got = f'{shape[1]}x{shape[0]}' if len(shape) >= 2 else f'shape {shape}'
-        raise ValueError(f'image size: expected {LEAST_SIDE_PX} to {MOST_SIDE_PX} px a side, got {got}')
+        raise ValueError(f'image size: expected {LEAST_SIDE_PX} to {MOST_SIDE_PX} px a side, '
+                         f'got {got}')
 
 
 def _checked(pixels: npt.NDArray[typing.Any], dtype: type, ndim: int,
@@ -152,7 +154,7 @@ def _contiguous(pixels: npt.NDArray[typing.Any]) -> npt.NDArray[typing.Any]:
 
 def _eight_bits(pixels: npt.NDArray[np.uint16]) -> Grey:
     sample = pixels[::4, ::4].ravel()
-    brightest = int(np.partition(sample, int(0.999 * (sample.size - 1)))[
-        int(0.999 * (sample.size - 1))])
-    shift = max(0, brightest.bit_length() - 8)
-    return np.minimum(pixels >> shift, 255).astype(np.uint8)
+    at = int(0.999 * (sample.size - 1))
+    shift = max(0, int(np.partition(sample, at)[at]).bit_length() - 8)
+    eight: Grey = np.minimum(pixels >> shift, 255).astype(np.uint8)
+    return eight

@@ -4,8 +4,6 @@
 
 from __future__ import annotations
 
-import typing
-
 import numpy as np
 
 from servo_nodes.goal import Goal
@@ -22,7 +20,8 @@ class Reference:
 
     Attributes
     ----------
-    uv : (N, 2), px, points of the goal view that are followed; their number is the point's id
+    uv : (N, 2), px, points of the goal view that are followed
+    ids : (N,), uint32, their numbers in views
     xy : (N, 2), normalised
     depths : (N,), m, NaN where unknown
     from_pixels : (N, 2, 2), d(x, y)/d(u, v) of the goal's lens at the points
@@ -38,8 +37,10 @@ class Reference:
         sure = np.isfinite(xy).all(-1)
         self.uv: Floats = uv[sure]
         self.xy: Floats = xy[sure]
+        self.ids = np.arange(len(self.uv), dtype=np.uint32)
         self.depths: Floats = depths_of_goal(goal, self.uv, self.xy)
-        self.from_pixels: Floats = np.linalg.inv(goal.camera.pixel_jacobian(self.xy))
+        self.from_pixels: Floats = np.linalg.inv(
+            goal.camera.pixel_jacobian(self.xy)).astype(np.float64)
         self.patches = patches.Patches(goal.view, self.uv)
         keypoints = describer.describe(goal.view)
         keypoints_xy = goal.camera.normalised_from_pixels(keypoints.uv)
@@ -49,8 +50,3 @@ class Reference:
 
     def __len__(self) -> int:
         return len(self.uv)
-
-    @property
-    def centre_xy(self) -> Floats:
-        """Return the mean of the points, normalised."""
-        return typing.cast(Floats, self.xy.mean(0))

@@ -4,17 +4,22 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
+import cv2
 import numpy as np
 
 from servo_nodes.camera import Camera
 from servo_nodes.goal import Goal
-from servo_nodes.tracking import consensus, follow, homography
-from servo_nodes.tracking import depth as depths
+from servo_nodes.tracking import depth, homography, lesson
+from servo_nodes.tracking.finder import Finder
+from servo_nodes.tracking.follow import Sight
+from servo_nodes.tracking.health import Health
 from servo_nodes.tracking.keypoints import Describer
+from servo_nodes.tracking.lesson import Lesson
+from servo_nodes.tracking.markers import MarkerFinder, MarkerReference, Markers
 from servo_nodes.tracking.options import TrackerSettings
-from servo_nodes.tracking.pictures import Grey, grey_from_image, metres_from_depth
+from servo_nodes.tracking.pictures import Grey, Metres, grey_from_image, metres_from_depth
 from servo_nodes.tracking.reference import Reference
 from servo_nodes.values import Answer, Calibration, Floats, Image, View
 
@@ -33,10 +38,10 @@ class Status:
     reason : str, in words: what is followed, or why nothing is seen
     points : int, points of the goal
     inliers : int, points delivered
-    homography : (3, 3) goal px -> image px (pinhole parts), or None
+    homography : (3, 3) goal px -> image px (exact without lens distortion), or None
     residual_px : float, median distance of the points from the common model; NaN for none
     points_px, goal_px : (N, 2), px, the delivered points in the image and in the goal view
-    depth_source : str, `image`, `goal`, `marker`, `constant`, `mixed` or `none`
+    depth_source : str, where depths come from and how many: `goal 97`, `image 80, goal 12`, `none`
     """
 
     acquired: bool = False
@@ -50,14 +55,6 @@ class Status:
     depth_source: str = 'none'
 
 
-@dataclass(frozen=True, eq=False)
-class Lesson:
-    """What teaching came to: the goal, or None, and the answer that says why."""
-
-    goal: Goal | None
-    answer: Answer
-
-
 class Tracker:
     """Finds the goal's points in images; see `options` for the settings.
 
@@ -65,18 +62,18 @@ class Tracker:
     ----------
     settings : TrackerSettings
     rng : numpy.random.Generator
-        Seeds OpenCV's sampling; the same images then give the same views.
+        Seeds OpenCV's sampling, so that the same images give the same views.
     """
 
     def __init__(self, settings: TrackerSettings, rng: np.random.Generator) -> None:
-        self._rng = rng
+        cv2.setRNGSeed(int(rng.integers(2 ** 31)))
+        self._settings = settings
         self._camera: Camera | None = None
         self._goal: Goal | None = None
-        self._reference: Reference | None = None
-        self._last: follow.Sight | None = None
-        self._half: Grey | None = None
+        self._reference: Reference | MarkerReference | None = None
+        self._finder: Finder | MarkerFinder | None = None
+        self._health = Health()
         self._status = Status()
-        self._adopt(settings)
 
     @property
     def settings(self) -> TrackerSettings:
@@ -99,152 +96,160 @@ class Tracker:
         return self._goal
 
     def adopt(self, settings: TrackerSettings) -> Answer:
-        """Take new settings as a whole; a changed detector prepares the goal anew."""
-        self._adopt(settings)
-        self._prepare()
-        return Answer(True, 'settings taken')
+        """Take new settings as a whole; the goal is prepared anew and found anew."""
+        former = self._settings
+        self._settings = settings
+        try:
+            refusal = self._prepare()
+        except ValueError as error:
+            self._settings = former
+            self._prepare()
+            return Answer(False, str(error))
+        return Answer(not refusal, refusal or 'settings taken')
 
     def calibrate(self, calibration: Calibration) -> Answer:
         """Take the camera's calibration; the same one again costs nothing.
 
-        The answer is a refusal, and no camera is in force, when the calibration is unusable; when it
-        contradicts the goal, the camera stays and the goal is put aside.
+        An unusable calibration leaves no camera in force; one that contradicts the goal stays, and
+        the goal is put aside until the camera is the right one or another goal is taken.
         """
         try:
             camera = Camera.from_calibration(calibration,
                                              rectified=self._settings.image.rectified)
         except ValueError as error:
-            self._camera, self._reference = None, None
+            self._camera = None
+            self._prepare()
             return Answer(False, f'camera_info: {error}')
         if camera == self._camera:
             return Answer(True, 'camera unchanged')
         self._camera = camera
         refusal = self._prepare()
-        return Answer(False, refusal) if refusal else Answer(
-            True, f'camera {camera.frame_id}, {camera.width}x{camera.height} px')
+        return Answer(not refusal, refusal or (
+            f'camera {camera.frame_id}, {camera.width}x{camera.height} px'))
 
     def aim(self, goal: Goal) -> Answer:
-        """Take a goal; refuse one of another camera. Before `calibrate` the question is put off."""
-        if self._camera is not None:
-            refusal = _mismatch(goal.camera, self._camera)
-            if refusal:
-                return Answer(False, refusal)
+        """Take a goal; refuse one of another camera, as soon as there is a camera."""
+        refusal = '' if self._camera is None else _mismatch(goal.camera, self._camera)
+        if refusal:
+            return Answer(False, refusal)
+        former = self._goal
         self._goal = goal
-        self._prepare()
+        refusal = self._prepare()
+        if refusal:
+            self._goal = former
+            self._prepare()
+            return Answer(False, refusal)
         if self._reference is None:
-            return Answer(True, 'goal taken; it is used when the camera is known')
+            return Answer(True, 'goal taken; it is used as soon as the camera is known')
         return Answer(True, f'goal taken: {len(self._reference)} points')
 
     def look(self, image: Image, depth: Image | None = None) -> View:
-        """Return the goal's points in an image; an empty view, and `status`, when there are none."""
+        """Return the goal's points in an image; an empty view, and why in `status`, for none."""
         try:
             grey = grey_from_image(image)
         except ValueError as error:
             return self._nothing(image, str(error))
-        camera, reference = self._camera, self._reference
+        camera, reference, finder = self._camera, self._reference, self._finder
         if camera is None:
             return self._nothing(image, 'no usable camera_info yet')
-        if reference is None:
-            return self._nothing(image, 'no goal: teach one, or set goal.folder')
+        if reference is None or finder is None:
+            return self._nothing(image, self._without_goal())
         if grey.shape != (camera.height, camera.width):
-            return self._nothing(image, f'image size: expected {camera.width}x{camera.height} px as '
-                                 f'camera_info says, got {grey.shape[1]}x{grey.shape[0]}')
-        sight = self._seen(reference, camera, grey)
+            return self._nothing(image, _other_size(grey, camera))
+        fault = self._health.fault(grey, image.stamp,
+                                   frozen_stops=self._settings.image.frozen_stops)
+        if fault:
+            finder.lose()
+            return self._nothing(image, fault)
+        sight, words = finder.find(grey, self._health.brightness)
         if sight is None:
-            return self._nothing(image, self._status.reason)
-        return self._view(image, depth, reference, camera, sight)
+            return self._nothing(image, words)
+        return self._view(image, depth, words, camera, reference, sight)
 
     def teach(self, image: Image, depth: Image | None = None, *, taught: str) -> Lesson:
-        """Make a goal of what the camera sees now, judged; aiming at it is the caller's to do."""
+        """Make a goal of what the camera sees now, and judge it; to aim at it is the caller's.
+
+        Parameters
+        ----------
+        image : Image
+        depth : Image, optional, 16UC1 mm or 32FC1 m, registered to the image
+        taught : str, how, for the record
+        """
         if self._camera is None:
             return Lesson(None, Answer(False, 'no usable camera_info yet'))
-        try:
-            grey = grey_from_image(image)
-            plane = np.array([0.0, 0.0, 1.0, self._settings.teach.distance])
-            goal = Goal(grey, self._camera, plane, None, taught)
-        except ValueError as error:
-            return Lesson(None, Answer(False, str(error)))
-        return Lesson(goal, Answer(True, 'taught'))
-
-    def _adopt(self, settings: TrackerSettings) -> None:
-        self._settings = settings
-        self._describer = Describer('orb' if settings.detector.kind != 'sift' else 'sift',
-                                    settings.detector.features)
-        self._limits = follow.Limits(settings.follow.likeness, settings.follow.residual_px)
+        return lesson.taught(image, depth, self._camera, self._settings, taught)
 
     def _prepare(self) -> str:
-        """Make the reference of the present goal and camera; return why not, or nothing."""
-        self._last = self._reference = None
+        """Make what is needed to find the present goal; return why it cannot be, or nothing."""
+        self._reference = self._finder = None
         if self._goal is None or self._camera is None:
             return ''
         refusal = _mismatch(self._goal.camera, self._camera)
-        if not refusal:
-            self._reference = Reference(self._goal, points=self._settings.detector.points,
-                                        describer=self._describer)
-        return refusal
+        if refusal:
+            return refusal
+        settings = self._settings
+        reference: Reference | MarkerReference
+        if settings.detector.kind == 'marker':
+            markers = Markers(settings.marker)
+            reference = MarkerReference(self._goal, markers)
+            if not len(reference):
+                return ('goal: expected markers of marker.dictionary = '
+                        f'{settings.marker.dictionary} in its view, got none')
+            self._finder = MarkerFinder(reference, self._camera, markers)
+        else:
+            describer = Describer(settings.detector.kind, settings.detector.features)
+            reference = Reference(self._goal, points=settings.detector.points,
+                                  describer=describer)
+            if len(reference) < settings.consensus.acquire_points:
+                return (f'goal: expected at least {settings.consensus.acquire_points} points to '
+                        f'follow in its view, got {len(reference)}')
+            self._finder = Finder(settings, reference, self._camera, describer)
+        self._reference = reference
+        return ''
 
-    def _seen(self, reference: Reference, camera: Camera, grey: Grey) -> follow.Sight | None:
-        half = follow.halved(grey)
-        sight = None
-        if self._last is not None and self._half is not None:
-            matrix = follow.carried(reference, camera, self._last, self._half, half)
-            if matrix is not None:
-                sight = follow.verified(reference, camera, grey, matrix, self._limits, rounds=2)
-                if sight is not None and not self._believed(sight, 'keep'):
-                    sight = None
-        if sight is None:
-            sight = self._acquired(reference, camera, grey)
-        self._last, self._half = sight, half
-        return sight
+    def _without_goal(self) -> str:
+        if self._goal is None:
+            return 'no goal: teach one, or set goal.folder'
+        return _mismatch(self._goal.camera, self._camera) if self._camera else 'no camera'
 
-    def _acquired(self, reference: Reference, camera: Camera, grey: Grey) -> follow.Sight | None:
-        keypoints = self._describer.describe(grey)
-        pairs = self._describer.match(reference.keypoints, keypoints)
-        xy = camera.normalised_from_pixels(keypoints.uv[pairs.second])
-        goal_xy = reference.keypoints_xy[pairs.first]
-        sure = np.isfinite(xy[:, 0])
-        threshold = self._settings.consensus.threshold_px
-        plane = consensus.plane_through(goal_xy[sure], xy[sure], threshold / camera.fx)
-        self._status = replace(Status(), reason='goal not found')
-        if plane is None:
-            return None
-        alarms = consensus.log10_alarms(int(sure.sum()), int(plane[1].sum()), threshold,
-                                        float(grey.size))
-        matrix = homography.normed(plane[0], goal_xy[sure][plane[1]])
-        if matrix is None or not alarms < np.log10(consensus.ONCE_IN):
-            return None
-        loose = follow.Limits(0.6 * self._limits.likeness, 3.0)
-        sight = follow.verified(reference, camera, grey, matrix, loose, rounds=3)
-        if sight is not None:
-            sight = follow.verified(reference, camera, grey, sight.matrix, self._limits, rounds=3)
-        return sight if sight is not None and self._believed(sight, 'acquire') else None
-
-    def _believed(self, sight: follow.Sight, when: str) -> bool:
-        options = self._settings.consensus
-        least = options.acquire_points if when == 'acquire' else options.keep_points
-        return (len(sight) >= least and len(sight) >= consensus.LEAST_SHARE * sight.expected
-                and consensus.log10_chance(sight.expected, len(sight))
-                <= np.log10(consensus.ONCE_IN))
-
-    def _view(self, image: Image, depth: Image | None, reference: Reference, camera: Camera,
-              sight: follow.Sight) -> View:
-        goal_depths = reference.depths[sight.index]
-        z = goal_depths * homography.depth_ratios(sight.matrix, reference.xy[sight.index])
-        source = 'goal'
-        if depth is not None:
-            measured = depths.depths_in_image(metres_from_depth(depth), sight.uv)
-            z, source = np.where(np.isfinite(measured), measured, z), 'image'
+    def _view(self, image: Image, depth_image: Image | None, words: str, camera: Camera,
+              reference: Reference | MarkerReference, sight: Sight) -> View:
+        goal_xy, options = reference.xy[sight.index], self._settings
+        metres, trouble = _metres(depth_image, camera)
+        depths = depth.chosen(
+            options.depth.source, ratios=homography.depth_ratios(sight.matrix, goal_xy),
+            goal=reference.depths[sight.index], constant=options.teach.distance,
+            found=sight.depths,
+            measured=None if metres is None else depth.depths_in_image(metres, sight.uv))
         self._status = Status(
-            True, f'following {len(sight)} of {len(reference)} points', len(reference), len(sight),
-            homography.pixel_matrix(sight.matrix, reference.goal.camera, camera),
-            sight.residual_px, sight.uv, reference.uv[sight.index], source)
-        return View(image.stamp, image.frame_id, sight.xy, reference.xy[sight.index], z, goal_depths,
-                    sight.weights, sight.index.astype(np.uint32))
+            True, f'{words}: {len(sight)} of {len(reference)} points{trouble}', len(reference),
+            len(sight), homography.pixel_matrix(sight.matrix, reference.goal.camera, camera),
+            sight.residual_px, sight.uv, reference.uv[sight.index], depths.source)
+        return View(image.stamp, image.frame_id, sight.xy, goal_xy, depths.now, depths.goal,
+                    sight.weights, reference.ids[sight.index])
 
     def _nothing(self, image: Image, reason: str) -> View:
         points = 0 if self._reference is None else len(self._reference)
         self._status = Status(reason=reason, points=points)
         return View.empty(image.stamp, image.frame_id)
+
+
+def _metres(image: Image | None, camera: Camera) -> tuple[Metres | None, str]:
+    """Return a depth image in metres, or None and what is wrong with it."""
+    if image is None:
+        return None, ''
+    try:
+        metres = metres_from_depth(image)
+    except ValueError as error:
+        return None, f'; {error}'
+    if metres.shape != (camera.height, camera.width):
+        return None, f'; depth {_other_size(metres, camera)}'
+    return metres, ''
+
+
+def _other_size(picture: Grey | Metres, camera: Camera) -> str:
+    return (f'image size: expected {camera.width}x{camera.height} px as camera_info says, '
+            f'got {picture.shape[1]}x{picture.shape[0]}')
 
 
 def _mismatch(goal: Camera, camera: Camera) -> str:
