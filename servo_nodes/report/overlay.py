@@ -2,10 +2,10 @@
 # SPDX-License-Identifier: Apache-2.0
 """Draw on an image what the loop sees and does: points, what they lack, the state, the caps.
 
-An open diamond is where a point was taught, a full dot is where it is now, the line between them is
-the way it still has to go: the run is home when every dot lies in its diamond. All marks have a dark
-rim, so that they show on bright steel and in dark corners alike. Text is ASCII, which every OpenCV
-can draw.
+An open diamond is where a point was taught, a full dot is where it is now, the line between them
+is the way it still has to go: the run is home when every dot lies in its diamond. All marks have a
+dark rim, so that they show on bright steel and in dark corners alike. Text is ASCII, which every
+OpenCV can draw.
 """
 
 from __future__ import annotations
