@@ -47,7 +47,7 @@ class Observed:
 def _rates(points_xy: Floats, state: Observed, twist: Floats,
            gain: float) -> tuple[Floats, Floats]:
     x, y = points_xy[..., 0], points_xy[..., 1]
-    rows = interaction.points(points_xy[..., None, :], np.ones(x.shape))
+    rows = interaction.points(points_xy[..., None, :], np.ones((*x.shape, 1)))
     omega = rows[..., :3] @ twist[:3]
     turning = rows[..., 3:] @ twist[3:]
     left = points_xy - state.points_xy

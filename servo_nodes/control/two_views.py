@@ -123,7 +123,7 @@ def _nearest_rotation(matrix: Floats) -> Floats:
 
 
 def plane_of_goal(goal_xy: Floats, goal_depths: Floats) -> Floats:
-    """Return n / d (..., 3), 1/m, of the plane through the goal's points: 1/Z = (n/d).(x, y, 1)."""
+    """Return n / d (..., 3), 1/m, of the plane of the goal's points: 1/Z = (n/d).(x, y, 1)."""
     rays = _homogeneous(goal_xy)
     plane = np.einsum('...kn,...n->...k', np.linalg.pinv(rays), 1 / goal_depths)
     return typing.cast(Floats, plane)
