@@ -14,6 +14,7 @@ ROOT = Path(__file__).resolve().parents[2]
 PACKAGE = ROOT / 'servo_nodes'
 ROOMS = ('tracking', 'control', 'simulation', 'report', 'ros', 'offline')
 TEXT_SUFFIXES = {'.py', '.md', '.xml', '.yaml', '.yml', '.cfg', '.toml', '.policy', '.rviz'}
+BUILT = ('build', 'install', 'log', '__pycache__')
 PACKAGES = ('servo_nodes', *(f'servo_nodes.{room}' for room in ROOMS))
 
 
@@ -83,8 +84,8 @@ def kept_files() -> list[Path]:
                                 capture_output=True, text=True, check=True, timeout=60).stdout
         paths = [ROOT / line for line in listed.splitlines()]
     except (OSError, subprocess.SubprocessError):
-        paths = [path for pattern in ('*', '*/**/*') for path in ROOT.glob(pattern)
-                 if not any(part.startswith('.') or part in ('build', 'install', 'log')
+        paths = [path for path in ROOT.rglob('*')
+                 if not any(part.startswith('.') or part in BUILT or part.endswith('.egg-info')
                             for part in path.relative_to(ROOT).parts)]
     return sorted(path for path in paths
                   if path.is_file() and path.suffix in TEXT_SUFFIXES | {''})

@@ -12,11 +12,18 @@ A test compares the file with what this would write. A generated part stands bet
 
 from __future__ import annotations
 
+import functools
 import re
 import sys
+from collections.abc import Callable
 from pathlib import Path
 
 ROOT = Path(__file__).resolve().parents[2]
+sys.path.insert(0, str(ROOT))
+
+from servo_nodes.settings import Definition, definitions  # noqa: E402
+
+NODES = ('tracker', 'controller', 'simulator')
 README = ROOT / 'README.md'
 PART = re.compile(r'(<!-- generated: (?P<name>[\w ]+) -->\n)(?P<body>.*?)(<!-- end -->)', re.S)
 
@@ -67,7 +74,7 @@ def text_of(value: object) -> str:
     return str(value) if value != '' else "''"
 
 
-def range_of(definition: object) -> str:
+def range_of(definition: Definition) -> str:
     """Return what is allowed, in a few characters."""
     if definition.choices:
         return ', '.join(f'`{choice}`' for choice in definition.choices)
@@ -85,12 +92,28 @@ def range_of(definition: object) -> str:
     return words
 
 
-def parameters(cls: type) -> str:
-    """Return the table of a settings class."""
-    from servo_nodes.settings import definitions
+def settings_of(node: str) -> tuple[type, ...]:
+    """Return the settings classes of a node, its core's first."""
+    from servo_nodes.control.controller import ControllerSettings
+    from servo_nodes.ros import options
+    from servo_nodes.simulation.simulator import SimulatorSettings
+    from servo_nodes.tracking.tracker import TrackerSettings
+    core, shell = {'tracker': (TrackerSettings, options.TrackerNodeSettings),
+                   'controller': (ControllerSettings, options.ControllerNodeSettings),
+                   'simulator': (SimulatorSettings, options.SimulatorNodeSettings)}[node]
+    return core, shell, options.ShellSettings
+
+
+def known_of(node: str) -> dict[str, Definition]:
+    """Return every parameter of a node by its name."""
+    return {name: item for cls in settings_of(node) for name, item in definitions(cls).items()}
+
+
+def parameters(node: str) -> str:
+    """Return the table of a node's parameters."""
     return table(('parameter', 'default', 'allowed', 'unit', 'meaning'), [
         (f'`{name}`' + ' \\*' * item.fixed, f'`{text_of(item.default)}`', range_of(item),
-         item.unit, item.help) for name, item in definitions(cls).items()])
+         item.unit, item.help) for name, item in known_of(node).items()])
 
 
 def reasons() -> str:
@@ -117,15 +140,10 @@ def states() -> str:
     return f'```mermaid\n{diagram()}```\n'
 
 
-def parts() -> dict[str, object]:
+def parts() -> dict[str, Callable[[], str]]:
     """Return the writer of every generated part by its name."""
-    from servo_nodes.control.controller import ControllerSettings
-    from servo_nodes.simulation.simulator import SimulatorSettings
-    from servo_nodes.tracking.tracker import TrackerSettings
     return {'states': states, 'reasons': reasons,
-            'tracker parameters': lambda: parameters(TrackerSettings),
-            'controller parameters': lambda: parameters(ControllerSettings),
-            'simulator parameters': lambda: parameters(SimulatorSettings)}
+            **{f'{node} parameters': functools.partial(parameters, node) for node in NODES}}
 
 
 def rewritten(text: str) -> str:
@@ -141,5 +159,4 @@ def rewritten(text: str) -> str:
 
 
 if __name__ == '__main__':
-    sys.path.insert(0, str(ROOT))
     README.write_text(rewritten(README.read_text(encoding='utf-8')), encoding='utf-8')
