@@ -73,7 +73,7 @@ class Canvas:
         alpha = mask.astype(np.float32) * (opacity / 255)
         if worn > 0:
             alpha *= _ramp(self.wear[rows, columns], worn - 0.04, worn + 0.04)
-        self._blend((rows, columns), np.float32(colour), alpha)
+        self._blend((rows, columns), np.array(colour, np.float32), alpha)
 
     def shade(self, outlines: Sequence[npt.ArrayLike], factor: float, *,
               soft: float = 0.0) -> None:
@@ -93,13 +93,13 @@ class Canvas:
         if placed is None:
             return
         where, mask = placed
-        self._blend(where, material[where][..., None] * np.float32(tint),
-                    mask.astype(np.float32) / 255)
+        self._blend(where, material[where][..., None] * np.array(tint, np.float32),
+                    mask.astype(np.float32) / np.float32(255))
 
     def stain(self, amount: Field, colour: Colour) -> None:
         """Blend a colour over the whole sheet by `amount` (h, w), 0..1."""
         whole = (slice(0, self.size[1]), slice(0, self.size[0]))
-        self._blend(whole, np.float32(colour), amount)
+        self._blend(whole, np.array(colour, np.float32), amount)
 
     def write(self, text: str, at: tuple[float, float], wide: float, colour: Colour) -> None:
         """Write small print `wide`, m, long; `at` is its lower left corner."""
@@ -208,11 +208,13 @@ def blot(rng: np.random.Generator, x: float, y: float, radius: float, corners: i
     flat, turn = rng.uniform(0.5, 1.0), rng.uniform(0, np.pi)
     points = np.stack([reach * np.cos(angle), flat * reach * np.sin(angle)], axis=-1)
     cosine, sine = math.cos(turn), math.sin(turn)
-    return points @ np.array([[cosine, sine], [-sine, cosine]]) + (x, y)
+    outline: Floats = points @ np.array([[cosine, sine], [-sine, cosine]]) + (x, y)
+    return outline
 
 
 def _ramp(field: Field, low: float, high: float) -> Field:
-    return np.clip((field - np.float32(low)) / np.float32(high - low), 0, 1)
+    ramp: Field = np.clip((field - np.float32(low)) / np.float32(high - low), 0, 1)
+    return ramp
 
 
 def _softened(mask: Pixels, sigma: float) -> Pixels:

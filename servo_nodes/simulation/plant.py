@@ -17,7 +17,6 @@ from __future__ import annotations
 
 import collections
 import math
-import typing
 
 import numpy as np
 
@@ -39,13 +38,21 @@ class Plant:
     """
 
     def __init__(self, settings: PlantSettings, T_WC: Floats, now: Stamp) -> None:
-        self.settings = settings
         self._anchor, self._since = T_WC, now
         self._velocity = np.zeros(6)
         self._goal = np.zeros(6)
         self._ends: Stamp | None = None
         self._waiting: collections.deque[tuple[Stamp, Floats]] = collections.deque()
         self._now = now
+        self._set(settings)
+
+    def adopt(self, settings: PlantSettings) -> None:
+        """Let new settings apply from now on."""
+        self._move_anchor(self._now)
+        self._set(settings)
+
+    def _set(self, settings: PlantSettings) -> None:
+        self.settings = settings
         error = motion.pose_from_parts(
             motion.rotation_from_vector(settings.hand_eye_rotation), settings.hand_eye_translation)
         self._true_from_believed = motion.adjoint(motion.inverse(error))
@@ -93,7 +100,8 @@ class Plant:
                            (slice(3, 6), self.settings.angular_step)):
             if step > 0:
                 rounded[part] = np.round(rounded[part] / step) * step
-        return typing.cast(Floats, self._true_from_believed @ rounded)
+        executed: Floats = self._true_from_believed @ rounded
+        return executed
 
     def _next_change(self) -> Stamp | None:
         due = [self._waiting[0][0]] if self._waiting else []

@@ -65,8 +65,9 @@ def landmarks() -> Floats:
 
 def _steel(canvas: Canvas) -> Field:
     """Return the brightness of scuffed steel over the whole sheet, about 0.4..1.1."""
-    return (0.76 + 0.045 * canvas.brushed(0.03) + 0.24 * (canvas.clouds(0.25) - 0.5)
-            + 0.16 * (canvas.clouds(0.03) - 0.5)).astype(np.float32)
+    grain: Field = (0.76 + 0.045 * canvas.brushed(0.03) + 0.24 * (canvas.clouds(0.25) - 0.5)
+                    + 0.16 * (canvas.clouds(0.03) - 0.5)).astype(np.float32)
+    return grain
 
 
 def _plate(canvas: Canvas, steel: Field) -> None:
@@ -189,7 +190,7 @@ def _bolt(canvas: Canvas, steel: Field, x: float, y: float, radius: float) -> No
 
 
 def _scratches(canvas: Canvas) -> None:
-    """Scratch the plate: bright lines with a dark side, straight from tools, round from the ring."""
+    """Scratch the plate: bright lines with a dark side, from tools, and round the ring."""
     rng = canvas.rng
     for _ in range(190):
         start = rng.uniform((PLATE[0], PLATE[1]), (PLATE[2], PLATE[3]))

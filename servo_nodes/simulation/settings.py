@@ -24,7 +24,7 @@ class SceneSettings(Checked):
                         help='draws the scratches and the rust; the same number, the same plate')
     resolution: float = setting(0.0004, unit='m', low=0.0001, high=0.01, fixed=True,
                                 help='size of one texel of what the package draws')
-    width: float = setting(0.6, unit='m', low=0.01, high=100.0, fixed=True,
+    width: float = setting(0.4, unit='m', low=0.01, high=100.0, fixed=True,
                            help='width of the photograph or of the marker board')
     dictionary: str = setting('DICT_4X4_50', fixed=True,
                               help="OpenCV's name of the markers' dictionary")

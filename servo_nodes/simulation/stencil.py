@@ -13,6 +13,7 @@ Path = tuple[tuple[float, float], ...]
 
 # Paths from corner to corner; where one path ends and the next begins the stencil holds together.
 GLYPHS: dict[str, tuple[Path, ...]] = {
+    ' ': (),
     '2': (((0, 1.2), (1, 0), (3, 0), (4, 1), (4, 2.2), (2.4, 3.8)),
           ((1.9, 4.3), (0.2, 6), (4.4, 6))),
     '4': (((2.6, 0), (0, 4.2), (1.9, 4.2)), ((2.6, 4.2), (4.6, 4.2)), ((3.2, 1.9), (3.2, 3.6)),

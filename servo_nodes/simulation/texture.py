@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import math
 import typing
+from dataclasses import dataclass
 
 import cv2
 import numpy as np
@@ -40,9 +41,10 @@ class Texture:
     ----------
     pixels : (height, width, 3) or (height, width), uint8, BGR or grey
     width : float, m
+    height : float, m; by default the texels are square
     """
 
-    def __init__(self, pixels: Pixels, width: float) -> None:
+    def __init__(self, pixels: Pixels, width: float, height: float | None = None) -> None:
         if pixels.dtype != np.uint8 or pixels.ndim not in (2, 3) or (
                 pixels.ndim == 3 and pixels.shape[2] != 3):
             raise ValueError('texture: expected uint8 of shape (height, width) or (height, width, '
@@ -50,7 +52,8 @@ class Texture:
         if not width > 0:
             raise ValueError(f'width: expected a positive size in m, got {width!r}')
         self.width = float(width)
-        self.height = width * pixels.shape[0] / pixels.shape[1]
+        square = width * pixels.shape[0] / pixels.shape[1]
+        self.height = square if height is None else float(height)
         self.pitch = width / pixels.shape[1]
         colour = pixels if pixels.ndim == 3 else cv2.cvtColor(pixels, cv2.COLOR_GRAY2BGR)
         grey = pixels if pixels.ndim == 2 else cv2.cvtColor(pixels, cv2.COLOR_BGR2GRAY)
@@ -69,6 +72,22 @@ class Texture:
         across, down = wide / self.width, high / self.height
         return Level(pixels, np.array([[across, 0, wide / 2 - 0.5], [0, down, high / 2 - 0.5],
                                        [0, 0, 1]]))
+
+
+@dataclass(frozen=True, eq=False)
+class Face:
+    """A flat picture in space.
+
+    Attributes
+    ----------
+    texture : Texture
+    T_SF : (4, 4), pose of the face in its scene; the picture lies in z = 0, seen from z < 0
+    endless : bool, the picture is mirrored beyond its borders (a backdrop)
+    """
+
+    texture: Texture
+    T_SF: Floats
+    endless: bool = False
 
 
 def _smaller(pixels: Pixels) -> Pixels:
