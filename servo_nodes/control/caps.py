@@ -46,9 +46,10 @@ def ratios(twists: npt.ArrayLike, *, linear: npt.ArrayLike, angular: npt.ArrayLi
 
     A twist that is not finite, or so large that its square is not, gets the ratio 0.
     """
-    v, w = speeds(twists, tool)
     linear, angular = np.asarray(linear), np.asarray(angular)
-    ratio = np.minimum(linear / np.maximum(v, linear), angular / np.maximum(w, angular))
+    with np.errstate(over='ignore', invalid='ignore'):
+        v, w = speeds(twists, tool)
+        ratio = np.minimum(linear / np.maximum(v, linear), angular / np.maximum(w, angular))
     return typing.cast(Floats, np.where((v < np.inf) & (w < np.inf), ratio, 0.0))
 
 
@@ -89,8 +90,9 @@ def braked(previous: npt.ArrayLike, *, linear_step: npt.ArrayLike, angular_step:
     The part that takes longer to stop sets the pace; what is not finite rests at once.
     """
     previous = np.asarray(previous, dtype=np.float64)
-    v, w = speeds(previous, tool)
-    steps = np.maximum(v / np.asarray(linear_step), w / np.asarray(angular_step))
+    with np.errstate(over='ignore', invalid='ignore'):
+        v, w = speeds(previous, tool)
+        steps = np.maximum(v / np.asarray(linear_step), w / np.asarray(angular_step))
     ratio = 1.0 - 1.0 / np.maximum(steps, 1.0)
     left = np.where((steps > 1.0 + _AT_REST) & (steps < np.inf), ratio, 0.0)[..., None]
     return typing.cast(Floats, np.where(left > 0, left * np.where(left > 0, previous, 0.0), 0.0))

@@ -10,8 +10,7 @@ view translates its stamp to that clock. `observe`, `refuse`, `heartbeat`, `halt
 
 from __future__ import annotations
 
-import collections
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 
 import numpy as np
 
@@ -20,14 +19,13 @@ from servo_nodes.control import gate, states
 from servo_nodes.control.gate import Reaction, Row
 from servo_nodes.control.progress import Progress
 from servo_nodes.control.servo import Servo, Solution
-from servo_nodes.control.settings import ControllerSettings
+from servo_nodes.control.settings import ControllerSettings, fixed_change
 from servo_nodes.control.situation import Situation
 from servo_nodes.control.states import ENGAGED, MOVING, Event
 from servo_nodes.control.surroundings import Surroundings
-from servo_nodes.control.survey import figures, surveyed
+from servo_nodes.control.survey import broken, figures, surveyed
 from servo_nodes.control.tool import REST, Numbers, Outlet
 from servo_nodes.control.watch import Intake
-from servo_nodes.settings import definitions, mapping_from_settings
 from servo_nodes.values import (
     SECOND_NS,
     Answer,
@@ -39,7 +37,6 @@ from servo_nodes.values import (
     View,
 )
 
-INBOX = 64
 _EVENTS = {Reaction.FAULT: Event.FAULT, Reaction.STANDBY: Event.JUMP, Reaction.HOLD: Event.HOLD}
 
 
@@ -49,16 +46,16 @@ class Controller:
     Parameters
     ----------
     settings : ControllerSettings
+    servo : Servo, another source of raw twists; None builds the one the settings ask for
     """
 
-    def __init__(self, settings: ControllerSettings) -> None:
+    def __init__(self, settings: ControllerSettings, *, servo: Servo | None = None) -> None:
         self._settings = settings
-        self._servo = Servo(settings.law)
+        self._servo = servo or Servo(settings.law)
         self._intake = Intake(settings.watchdog)
         self._outlet = Outlet(settings.caps, settings.output)
         self._around = Surroundings()
         self._progress = Progress()
-        self._inbox: collections.deque[Callable[[Stamp], bool]] = collections.deque(maxlen=INBOX)
         self._state = State.STANDBY
         self._row: Row | None = None
         self._detail = ''
@@ -66,7 +63,6 @@ class Controller:
         self._sent: Numbers = REST
         self._wanted: Numbers = REST
         self._ratio = 1.0
-        self._clock: Stamp | None = None
         self._ticked: Stamp | None = None
         self._solution: Solution | None = None
         self._error: Exception | None = None
@@ -99,28 +95,18 @@ class Controller:
 
     def observe(self, view: View, received: Stamp | None = None) -> None:
         """Store a view, received at `received`, ns; None: at the time of the next command."""
-        if received is not None:
-            self._clock = received if self._clock is None else max(received, self._clock)
-        elif self._clock is None:
-            self._clock = view.stamp
-
-        def judged(now: Stamp) -> bool:
-            good = self._intake.judge(view, now if received is None else min(received, now))
-            if good is None:
-                return False
-            self._servo.observe(good)
-            return True
-        self._inbox.append(judged)
+        self._intake.post(view, received)
 
     def refuse(self, reason: Reason, text: str) -> None:
-        """Take note of an input that the shell had to drop, and why: *expected ..., got ...*."""
-        if reason in (Reason.NO_CAMERA, Reason.CAMERA_MISMATCH):
-            self._around.camera_fault = text
+        """Take note of an input that had to be dropped, and why: *expected ..., got ...*.
 
-        def dropped(now: Stamp) -> bool:
-            self._intake.drop(reason, text, now)
-            return False
-        self._inbox.append(dropped)
+        With `no_camera` it was a calibration, which the next good one makes up for; with any other
+        reason it was features.
+        """
+        if reason is Reason.NO_CAMERA:
+            self._around.camera_fault = text
+        else:
+            self._intake.post_fault(reason, text)
 
     def halt(self, on: bool) -> None:
         """Stop now and latch when `on`; going off does not release it, `reset` does."""
@@ -152,16 +138,17 @@ class Controller:
         if self._state is State.FAULTED and self._row is not None:
             return Answer(False, f'{self._row.reason.value}: {self._detail}')
         self._jumped = False
+        now = self._newest()
         try:
-            if self._clock is not None:
-                self._take(self._clock)
+            if now is not None:
+                self._take(now)
         except Exception as error:
             self._poison(error)
             return Answer(False, f'{Reason.EXCEPTION.value}: {self._detail}')
-        row = gate.verdict(situation := self._situation(self._clock), gate.REFUSING)
+        row = gate.verdict(situation := self._situation(now), gate.REFUSING)
         if row is not None:
             return Answer(False, f'{row.reason.value}: {row.sentence(situation)}')
-        self._starting = True
+        self._starting, self._row, self._detail = True, None, ''
         self._turn(Event.ENGAGE)
         return Answer(True, 'the loop is on')
 
@@ -183,11 +170,9 @@ class Controller:
 
     def adopt(self, settings: ControllerSettings) -> Answer:
         """Replace the settings as a whole, or refuse to change what is fixed."""
-        new, old = mapping_from_settings(settings), mapping_from_settings(self._settings)
-        for name, definition in definitions(ControllerSettings).items():
-            if definition.fixed and new[name] != old[name]:
-                return Answer(False, f'{name}: expected {old[name]!r} to stay while running, got '
-                              f'{new[name]!r}; set it at the start')
+        text = fixed_change(self._settings, settings)
+        if text:
+            return Answer(False, text)
         self._outlet = Outlet(settings.caps, settings.output)
         self._servo.settings, self._intake.settings = settings.law, settings.watchdog
         self._settings = settings
@@ -208,11 +193,9 @@ class Controller:
     def _poison(self, error: Exception) -> None:
         """Stand still until a reset: nothing in here can be trusted any more."""
         self._error = error
-        self._row = gate.TABLE[0]
-        settings = self._settings
-        self._detail = self._row.sentence(Situation(
-            settings.watchdog, settings.heartbeat, settings.output,
-            exception=f'{type(error).__name__}: {error}'))
+        situation = broken(self._settings, error)
+        self._row = gate.verdict(situation)
+        self._detail = '' if self._row is None else self._row.sentence(situation)
         self._sent = REST
         self._turn(Event.FAULT)
 
@@ -221,7 +204,7 @@ class Controller:
             self._forget()
             self._jumping, self._jumped = False, True
         duration = 0.0 if self._ticked is None else (now - self._ticked) / SECOND_NS
-        self._ticked = self._clock = now
+        self._ticked = now
         self._progress.leash.add(self._sent, duration)
         self._intake.moved(self._sent, duration)
         self._around.tick()
@@ -240,10 +223,16 @@ class Controller:
     def _take(self, now: Stamp) -> None:
         """Judge what came, in order of arrival; a loop that is off still shows the error."""
         fresh = False
-        while self._inbox:
-            fresh |= self._inbox.popleft()(now)
+        for view in self._intake.judged(now):
+            self._servo.observe(view)
+            fresh = True
         if fresh and self._state not in ENGAGED:
             self._solve(now)
+
+    def _newest(self) -> Stamp | None:
+        """Return the newest time that was told, by a tick or with a view; None before any."""
+        times = [time for time in (self._ticked, self._intake.told) if time is not None]
+        return max(times, default=None)
 
     def _solve(self, now: Stamp) -> None:
         solution = self._solution = self._servo.solve(now)
@@ -270,7 +259,7 @@ class Controller:
                 self._turn(_EVENTS[row.reaction])
         elif self._state is State.HOLDING and self._row is not None:
             if self._intake.good_in_a_row >= self._row.release and not any(self._sent):
-                self._starting = True
+                self._starting, self._row, self._detail = True, None, ''
                 self._turn(Event.RELEASE)
         else:
             self._row, self._detail = row, '' if row is None else row.sentence(situation)
@@ -299,10 +288,9 @@ class Controller:
             self._progress.restart()
 
     def _forget(self) -> None:
-        self._inbox.clear()
         self._intake.forget()
         self._servo.reset()
-        self._clock = self._ticked = self._solution = None
+        self._ticked = self._solution = None
         self._wanted = REST
 
     def _answer(self, now: Stamp, figures: Mapping[str, float]) -> Command:

@@ -220,14 +220,14 @@ TABLE: tuple[Row, ...] = (
     _drop_row(Reason.IMAGE_SILENT, ONLY_WHEN_IT_LASTS, 'check the camera and its driver'),
     _drop_row(Reason.FEATURES_STALE, 1, 'shorten the way from camera to tracker, or raise '
               'watchdog.staleness'),
-    _row(Reason.FEATURES_STALE, _too_old, _HOLD, sentence=lambda s: (
-        f'the newest image is {s.image_age:.3f} s old, at most {s.watchdog.staleness:g} s '
-        'allowed; shorten the way from camera to tracker, or raise watchdog.staleness')),
     _drop_row(Reason.STAMP_FUTURE, 3, 'set the clocks of both machines right'),
     _drop_row(Reason.STAMP_BACKWARD, 3, 'stop a second tracker, or disengage and reset'),
     _drop_row(Reason.STAMP_ZERO, 3, 'let the camera driver stamp its images, or set '
               'watchdog.zero_stamp to receive'),
     _drop_row(Reason.TOO_FEW_POINTS, 1, 'bring the target into view, light it, or teach it anew'),
+    _row(Reason.FEATURES_STALE, _too_old, _HOLD, sentence=lambda s: (
+        f'the newest image is {s.image_age:.3f} s old, at most {s.watchdog.staleness:g} s '
+        'allowed; shorten the way from camera to tracker, or raise watchdog.staleness')),
     _row(Reason.ILL_CONDITIONED, _ill_conditioned, _HOLD, sentence=lambda s: s.refusal or (
         f'condition {s.condition:.3g} and smallest singular value {s.smallest:.2g}, at most '
         f'{s.watchdog.condition:g} and at least {s.watchdog.smallest:g} allowed; spread the '
@@ -242,7 +242,6 @@ TABLE: tuple[Row, ...] = (
         'law.kind')),
 )
 
-ALWAYS = tuple(row for row in TABLE if row.always)
 REFUSING = tuple(row for row in TABLE if row.refuses)
 SEVERITY = {reason: min(rank for rank, row in enumerate(TABLE) if row.reason is reason)
             for reason in dict.fromkeys(row.reason for row in TABLE)}

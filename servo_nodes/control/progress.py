@@ -90,7 +90,8 @@ class Settling:
         self.is_home = False
 
     def add(self, motion: typing.Sequence[float], error_px: float, now: Stamp,
-            settings: SettleSettings) -> None:
+            settings: SettleSettings, *, linear_noise: float = 0.0,
+            angular_noise: float = 0.0) -> None:
         """Take what is left at `now`.
 
         Parameters
@@ -99,6 +100,8 @@ class Settling:
         error_px : float
         now : int, ns
         settings : SettleSettings
+        linear_noise, angular_noise : float, m and rad, how surely the view tells the pose; nobody
+            can be asked to stand nearer than that
         """
         sample = [*motion, error_px]
         if self._mean and now >= self._last:
@@ -107,8 +110,8 @@ class Settling:
                       for old, new in zip(self._mean, sample, strict=True)]
         self._mean, self._last = sample, now
         factor = settings.hysteresis if self.is_home else 1.0
-        if not (math.hypot(*sample[:3]) <= factor * settings.linear
-                and math.hypot(*sample[3:6]) <= factor * settings.angular
+        if not (math.hypot(*sample[:3]) <= factor * max(settings.linear, linear_noise)
+                and math.hypot(*sample[3:6]) <= factor * max(settings.angular, angular_noise)
                 and sample[6] <= factor * settings.error_px):
             self._within, self.is_home = None, False
             return
@@ -140,5 +143,9 @@ class Progress:
         """Take what a moving loop knows at `now`; `twist` is the solution's, as 6 numbers."""
         watchdog, settle = settings.watchdog, settings.settle
         self.growth.add(solution.error_px, now, watchdog.diverging_window)
-        self.stall.add(solution.error_px, now, watchdog, settle.hysteresis * settle.error_px)
-        self.settling.add([part / solution.gain for part in twist], solution.error_px, now, settle)
+        slack = settle.hysteresis if self.settling.is_home else 1.0
+        self.stall.add(solution.error_px, now, watchdog, slack * settle.error_px)
+        scatter = [settle.noise_px * part for part in solution.scatter.tolist()]
+        self.settling.add([part / solution.gain for part in twist], solution.error_px, now, settle,
+                          linear_noise=math.hypot(*scatter[:3]),
+                          angular_noise=math.hypot(*scatter[3:]))

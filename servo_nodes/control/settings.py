@@ -10,7 +10,13 @@ import numpy as np
 
 from servo_nodes import motion
 from servo_nodes.control.law import LawSettings
-from servo_nodes.settings import Checked, group, setting
+from servo_nodes.settings import (
+    Checked,
+    definitions,
+    group,
+    mapping_from_settings,
+    setting,
+)
 
 LINEAR_HARD_CAP = 0.25
 ANGULAR_HARD_CAP = 1.5
@@ -147,6 +153,10 @@ class SettleSettings(Checked):
     angular: float = setting(
         0.5e-3, unit='rad', low=1e-6, high=0.5,
         help='largest turn that the law still asks for')
+    noise_px: float = setting(
+        0.1, unit='px', low=0.0, high=10.0,
+        help='noise of the tracked points; where they tell the pose less surely than settle.linear '
+             'and settle.angular ask, what they do tell is enough')
     duration: float = setting(
         0.5, unit='s', low=0.02, high=30.0,
         help='how long all of this must hold before the state turns to settled')
@@ -196,3 +206,13 @@ class ControllerSettings(Checked):
     output: OutputSettings = group(OutputSettings)
     rate: float = setting(100.0, unit='Hz', low=10.0, high=1000.0, fixed=True,
                           help='how often the controller decides')
+
+
+def fixed_change(old: ControllerSettings, new: ControllerSettings) -> str:
+    """Return the sentence about a setting that must not change while running; empty without."""
+    before, after = mapping_from_settings(old), mapping_from_settings(new)
+    for name, definition in definitions(ControllerSettings).items():
+        if definition.fixed and before[name] != after[name]:
+            return (f'{name}: expected {before[name]!r} to stay while running, got '
+                    f'{after[name]!r}; set it at the start')
+    return ''

@@ -45,6 +45,12 @@ def surveyed(settings: ControllerSettings, around: Surroundings, intake: Intake,
         late_in_a_row=around.late_in_a_row, late=around.late)
 
 
+def broken(settings: ControllerSettings, error: Exception) -> Situation:
+    """Return the situation after an error of ours; nothing but the error is to be trusted."""
+    return Situation(settings.watchdog, settings.heartbeat, settings.output,
+                     exception=f'{type(error).__name__}: {error}')
+
+
 def figures(around: Surroundings, intake: Intake, progress: Progress, solution: Solution | None,
             now: Stamp, *, ratio: float) -> dict[str, float]:
     """Return what a command says about the loop; what rests on a view is absent without one."""

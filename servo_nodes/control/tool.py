@@ -78,7 +78,10 @@ class Outlet:
         return self.capped([old + part for old, part in zip(sent, step, strict=True)])
 
     def braked(self, sent: Numbers, duration: float) -> Numbers:
-        """Return the twist that follows `sent` after `duration` s of a hold; exact rest at last."""
+        """Return the twist that follows `sent` after `duration` s of a hold, at last exact rest.
+
+        The part that takes longer to stop sets the pace of both.
+        """
         if not duration > 0:
             return self.capped(sent)
         limits = self._limits

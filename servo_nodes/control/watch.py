@@ -4,9 +4,10 @@
 
 from __future__ import annotations
 
+import collections
 import dataclasses
 import math
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 
 import numpy as np
 
@@ -17,6 +18,8 @@ from servo_nodes.values import SECOND_NS, Floats, Reason, Stamp, View
 FARTHEST_XY = 100.0
 DEPTHS = (1e-3, 1e4)
 LEAST_MOTION = 1e-3
+
+INBOX = 64
 
 Fault = tuple[Reason, str]
 
@@ -31,6 +34,7 @@ class Intake:
 
     Attributes
     ----------
+    told : int or None, ns, the newest time that came with a view, judged or not
     heard, good, image : int or None, ns: receipt of the newest message, receipt of the newest good
         one, stamp of its image
     bad, bad_text, bad_in_a_row : why the newest message was dropped, and how many since a good one
@@ -44,10 +48,14 @@ class Intake:
         self.camera: Camera | None = None
         self.counts: dict[Reason, int] = {}
         self.dropped = 0
+        self._inbox: collections.deque[tuple[View | Fault, Stamp | None]] = collections.deque(
+            maxlen=INBOX)
         self.forget()
 
     def forget(self) -> None:
         """Forget every view, so that a new time line is accepted; the counts stay."""
+        self._inbox.clear()
+        self.told: Stamp | None = None
         self.heard: Stamp | None = None
         self.good: Stamp | None = None
         self.image: Stamp | None = None
@@ -57,6 +65,31 @@ class Intake:
         self._points: Floats | None = None
         self._changed: Stamp = 0
         self._moved = 0.0
+
+    def post(self, view: View, received: Stamp | None) -> None:
+        """Store a view for `judged`; nothing is looked at yet, so that any thread may call."""
+        told = self.told
+        if received is not None:
+            self.told = received if told is None else max(received, told)
+        elif told is None:
+            self.told = view.stamp
+        self._inbox.append((view, received))
+
+    def post_fault(self, reason: Reason, text: str) -> None:
+        """Store that a message had to be dropped before it became a view."""
+        self._inbox.append(((reason, text), None))
+
+    def judged(self, now: Stamp) -> Iterator[View]:
+        """Judge what was stored, in order of arrival; yield the good views."""
+        while self._inbox:
+            item, received = self._inbox.popleft()
+            received = now if received is None else min(received, now)
+            if not isinstance(item, View):
+                self.drop(*item, received)
+                continue
+            good = self.judge(item, received)
+            if good is not None:
+                yield good
 
     def moved(self, twist: Sequence[float], duration: float) -> None:
         """Note that `twist` (6 numbers) was sent for `duration` s: the points must move, too."""
@@ -97,11 +130,8 @@ class Intake:
             return Reason.STAMP_FUTURE, (
                 f'features: expected a stamp at most {self.settings.future_tolerance:g} s ahead '
                 f'of the clock, got {-behind:.3f} s')
-        if self.image is not None and min(stamp, received) < self.image:
-            return Reason.STAMP_BACKWARD, (
-                'features: expected a stamp after the last one, got one '
-                f'{age(stamp, self.image):.3f} s before it')
-        if self.image is not None and min(stamp, received) == self.image:
+        newest, stamp = self.image, min(stamp, received)
+        if stamp == newest:
             return Reason.IMAGE_SILENT, (
                 f'features: expected a new image within {self.settings.timeout:g} s, got the same '
                 'one again')
@@ -109,6 +139,10 @@ class Intake:
             return Reason.FEATURES_STALE, (
                 f'features: expected an image at most {self.settings.staleness:g} s old, got '
                 f'{behind:.3f} s')
+        if newest is not None and stamp < newest:
+            return Reason.STAMP_BACKWARD, (
+                'features: expected a stamp after the last one, got one '
+                f'{age(stamp, newest):.3f} s before it')
         return None
 
     def _fault_of_frame(self, view: View) -> Fault | None:
