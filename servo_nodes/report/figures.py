@@ -11,12 +11,13 @@ import numpy as np
 
 from servo_nodes.report import palette
 from servo_nodes.report.drawing import Drawing, pyplot_style, saved
-from servo_nodes.report.record import Path, Record, Series
+from servo_nodes.report.record import Path, Record
 from servo_nodes.report.space import draw_camera
 from servo_nodes.report.stops import STOPPED, spans
 from servo_nodes.values import SECOND_NS, Floats, Stamp
 
 MOST_PATHS = 40
+_SILENCE = 6.0
 _WIDTH_IN, _STRIP_IN, _PANEL_IN = 9.2, 0.62, 1.22
 _LINES: tuple[typing.Any, ...] = ('-', (0, (5, 1.6)), (0, (1.2, 1.6)))
 
@@ -47,7 +48,7 @@ def draw_time(record: Record) -> Drawing | None:
         _strip(axes[0], record)
         for axis, (draw, series) in zip(axes[1:], panels, strict=True):
             _stops(axis, record)
-            draw(axis, record, series, _seconds(record, series.times))
+            draw(axis, record, *_with_gaps(_seconds(record, series.times), series.values))
         axes[-1].set_xlabel('time, s')
         axes[-1].set_xlim(0, max(1e-3, (record.end - record.origin) / SECOND_NS))
         figure.align_ylabels(axes)
@@ -108,6 +109,22 @@ def _seconds(record: Record, times: typing.Any) -> Floats:
     return seconds
 
 
+def _with_gaps(t: Floats, values: Floats) -> tuple[Floats, Floats]:
+    """Return times (N,) and rows (N, K) with a row of NaN wherever the series fell silent."""
+    steps = np.diff(t)
+    if not len(steps):
+        return t, values
+    gaps = np.flatnonzero(steps > max(_SILENCE * float(np.median(steps)), 0.1)) + 1
+    return (np.insert(t, gaps, t[gaps - 1] + 1e-3), np.insert(values, gaps, np.nan, axis=0))
+
+
+def _logarithmic(axis: typing.Any, columns: Floats) -> None:
+    """Use a logarithmic axis where the values span more than a decade."""
+    positive = columns[np.isfinite(columns) & (columns > 0)]
+    if len(positive) and positive.max() > 10 * positive.min():
+        axis.set_yscale('log')
+
+
 def _second(record: Record, stamp: Stamp) -> float:
     return (stamp - record.origin) / SECOND_NS
 
@@ -144,20 +161,20 @@ def _stops(axis: typing.Any, record: Record) -> None:
                          color=palette.STATES[span.event.state], alpha=0.2)
 
 
-def _error(axis: typing.Any, record: Record, series: Series, t: Floats) -> None:
-    error = series.values[:, 0]
-    axis.semilogy(t, np.where(error > 0, error, np.nan), color=palette.INK)
+def _error(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    axis.plot(t, np.where(values > 0, values, np.nan), color=palette.INK)
+    _logarithmic(axis, values)
     axis.set_ylabel('error\npx')
 
 
-def _twist(axis: typing.Any, record: Record, series: Series, t: Floats) -> None:
-    _speeds(axis, t, 1000 * series.values[:, :3], ('right', 'down', 'forward'))
+def _twist(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    _speeds(axis, t, 1000 * values[:, :3], ('right', 'down', 'forward'))
     _cap(axis, record, 'linear', 1000)
     axis.set_ylabel('linear\nmm/s')
 
 
-def _turn(axis: typing.Any, record: Record, series: Series, t: Floats) -> None:
-    _speeds(axis, t, np.degrees(series.values[:, 3:]), ('about right', 'about down', 'roll'))
+def _turn(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    _speeds(axis, t, np.degrees(values[:, 3:]), ('about right', 'about down', 'roll'))
     _cap(axis, record, 'angular', math.degrees(1))
     axis.set_ylabel('angular\ndeg/s')
 
@@ -174,44 +191,55 @@ def _cap(axis: typing.Any, record: Record, label: str, scale: float) -> None:
     if caps is not None:
         axis.plot(_seconds(record, caps.times), scale * caps.column(label), color=palette.SOFT,
                   linestyle=(0, (2, 2)), linewidth=1, label='cap')
-    axis.legend(loc='upper right', ncols=5, borderpad=0.1, columnspacing=1.2, handlelength=1.8)
+    _key(axis, 5)
 
 
-def _points(axis: typing.Any, record: Record, series: Series, t: Floats) -> None:
-    axis.fill_between(t, series.values[:, 0], step='post', color=palette.GOAL, alpha=0.35,
-                      linewidth=0)
-    axis.step(t, series.values[:, 0], where='post', color=palette.INK, linewidth=0.9)
+def _key(axis: typing.Any, columns: int) -> None:
+    """Put the key at the top right, on room made for it above the curves."""
+    low, high = axis.get_ylim()
+    if axis.get_yscale() == 'log':
+        axis.set_ylim(low, high * (high / low) ** 0.28)
+    else:
+        axis.set_ylim(low, high + 0.24 * (high - low))
+    axis.legend(loc='upper right', ncols=columns, borderpad=0, borderaxespad=0.1,
+                columnspacing=1.2, handlelength=1.8)
+
+
+def _points(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    axis.fill_between(t, values[:, 0], step='post', color=palette.GOAL, alpha=0.35, linewidth=0)
+    axis.step(t, values[:, 0], where='post', color=palette.INK, linewidth=0.9)
     axis.set_ylabel('points\nseen')
     axis.set_ylim(bottom=0)
 
 
-def _condition(axis: typing.Any, record: Record, series: Series, t: Floats) -> None:
-    condition = series.values[:, 0]
-    axis.semilogy(t, np.where(condition > 0, condition, np.nan), color=palette.INK)
+def _condition(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    axis.plot(t, values, color=palette.INK)
+    _logarithmic(axis, values)
     axis.set_ylabel('condition')
 
 
-def _latency(axis: typing.Any, record: Record, series: Series, t: Floats) -> None:
-    for column, label, colour, dash in zip(series.values.T, series.labels,
-                                           (palette.INK, *palette.AXES), (_LINES[0], *_LINES),
+def _latency(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    labels = record.series['latency'].labels
+    colours = (palette.INK, *palette.AXES)
+    for column, label, colour, dash in zip(values.T, labels, colours, (*_LINES, '-'),
                                            strict=False):
         axis.plot(t, column, color=colour, label=label, linewidth=1, linestyle=dash)
     axis.set_ylabel('latency\nms')
     axis.set_ylim(bottom=0)
-    axis.legend(loc='upper right', ncols=4, borderpad=0.1)
+    _key(axis, 4)
 
 
-def _offset(axis: typing.Any, record: Record, series: Series, t: Floats) -> None:
-    metres = np.linalg.norm(series.values[:, :3], axis=1)
-    angle = np.linalg.norm(series.values[:, 3:], axis=1)
+def _offset(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    metres = np.linalg.norm(values[:, :3], axis=1)
+    angle = np.linalg.norm(values[:, 3:], axis=1)
     axis.semilogy(t, 1000 * metres, color=palette.INK, label='position, mm')
     axis.semilogy(t, np.degrees(angle), color=palette.AXES[0], linestyle=_LINES[1],
                   label='angle, deg')
     axis.set_ylabel('true offset\nmm, deg')
-    axis.legend(loc='upper right', ncols=2, borderpad=0.1)
+    _key(axis, 2)
 
 
-_Panel: typing.TypeAlias = typing.Callable[[typing.Any, Record, Series, Floats], None]
+_Panel: typing.TypeAlias = typing.Callable[[typing.Any, Record, Floats, Floats], None]
 _PANELS: tuple[tuple[str, _Panel], ...] = (
     ('error', _error), ('offset', _offset), ('twist', _twist), ('twist', _turn),
     ('points', _points), ('condition', _condition), ('latency', _latency))

@@ -181,6 +181,10 @@ class Recorder:
         """Add one row to a declared series; rows may come out of order."""
         self._rows[name].append((stamp, tuple(map(float, values))))
 
+    def recent(self, name: str, count: int) -> list[float]:
+        """Return the first column of the last rows that were noted."""
+        return [values[0] for _, values in self._rows[name][-count:]]
+
     def turn(self, event: Event) -> None:
         """Add an event when state or reason differ from the last one's."""
         last = self.events[-1] if self.events else None

@@ -8,6 +8,7 @@ is the origin.
 
 from __future__ import annotations
 
+import math
 import typing
 
 import numpy as np
@@ -22,6 +23,7 @@ _SIDES = (('seen from above', 0, 2, 'right', 'forward'),
           ('seen from the side', 2, 1, 'forward', 'down'),
           ('seen from behind', 0, 1, 'right', 'down'))
 _FRUSTA = 7
+_ELEVATION_DEG = 22.0
 
 
 def draw_camera(record: Record) -> Drawing | None:
@@ -33,8 +35,8 @@ def draw_camera(record: Record) -> Drawing | None:
     turns = series.values[:, 3:]
     picked = _evenly(places, turns)
     with pyplot_style() as make:
-        figure = make(figsize=(9.2, 5.6), layout='constrained')
-        grid = figure.add_gridspec(2, 3, width_ratios=(1, 1, 1.25))
+        figure = make(figsize=(9.2, 5.0), layout='constrained')
+        grid = figure.add_gridspec(2, 3, width_ratios=(1, 1, 1.7))
         for cell, side in zip((grid[0, 0], grid[0, 1], grid[1, 0]), _SIDES, strict=True):
             _draw_side(figure.add_subplot(cell), places, turns, picked, side)
         _draw_space(figure.add_subplot(grid[:, 2], projection='3d'), places, turns, picked)
@@ -112,8 +114,17 @@ def _draw_space(axis: typing.Any, places: Floats, turns: Floats, picked: list[in
     axis.set_xlabel('right')
     axis.set_ylabel('forward')
     axis.set_zlabel('up')
-    axis.view_init(elev=22, azim=-62)
-    axis.set_box_aspect((1, 1, 1))
+    axis.view_init(elev=_ELEVATION_DEG, azim=_azimuth((places[-1] - places[0]) @ rows.T))
+    axis.set_box_aspect((1, 1, 1), zoom=0.88)
+
+
+def _azimuth(way: Floats) -> float:
+    """Return the direction to look from, degrees, in which a way (3,) is longest."""
+    azimuths = np.array([-150.0, -120.0, -60.0, -30.0])
+    around, up = np.radians(azimuths), math.radians(_ELEVATION_DEG)
+    sights = np.stack([np.cos(around) * math.cos(up), np.sin(around) * math.cos(up),
+                       np.full(4, math.sin(up))], axis=1)
+    return float(azimuths[np.linalg.norm(np.cross(sights, way), axis=1).argmax()])
 
 
 def _draw_key(axis: typing.Any) -> None:
