@@ -34,7 +34,7 @@ _DOT = 3.2
 def overlay(image: Picture, *, points_px: npt.ArrayLike | None = None,
             goal_px: npt.ArrayLike | None = None, homography: npt.ArrayLike | None = None,
             state: State | None = None, reason: str = '', text: str = '',
-            error_px: float | None = None, points: tuple[int, int] | None = None,
+            error_px: float | None = None, points: tuple[int, int | None] | None = None,
             speed: tuple[float, float] | None = None,
             caps: tuple[float, float] | None = None) -> Picture:
     """Return a copy of an image, as bgr, with everything known drawn on it; the rest is left out.
@@ -46,7 +46,7 @@ def overlay(image: Picture, *, points_px: npt.ArrayLike | None = None,
     homography : (3, 3), goal px -> image px; draws the corners of the taught view
     state, reason, text : what the controller does, the reason's word, and its sentence
     error_px : float, px
-    points : seen, of how many
+    points : seen, of how many (None: not known)
     speed, caps : linear m/s, angular rad/s; speed is shown as a share of its cap
 
     Raises
@@ -235,14 +235,14 @@ def _draw_shape(canvas: Picture, state: State, centre: tuple[float, float], radi
 
 
 def _draw_foot(canvas: Picture, unit: float, error_px: float | None,
-               points: tuple[int, int] | None, speed: tuple[float, float] | None,
+               points: tuple[int, int | None] | None, speed: tuple[float, float] | None,
                caps: tuple[float, float] | None) -> None:
     height, width = canvas.shape[:2]
     words = []
     if error_px is not None:
         words.append(f'error {error_px:.2f} px' if math.isfinite(error_px) else 'error unknown')
     if points is not None:
-        words.append(f'{points[0]} of {points[1]} points')
+        words.append(f'{points[0]}{"" if points[1] is None else f" of {points[1]}"} points')
     if not words and speed is None:
         return
     _shade(canvas, round(height - 26 * unit), height)

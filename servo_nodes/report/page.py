@@ -115,7 +115,7 @@ def _stop_table(record: Record, found: list[Stop]) -> str:
         f'<td>{_milliseconds(stop.reaction)}</td><td>{_milliseconds(stop.braking)}</td>'
         f'<td>{stop.span.seconds:.2f} s</td></tr>' for stop in found)
     return ('<section><h2>Every stop</h2><table class="stops"><tr><th>state</th><th>at</th>'
-            '<th>why</th><th>last points seen to exact zero</th><th>decision to exact zero</th>'
+            '<th>why</th><th>last points heard to exact zero</th><th>decision to exact zero</th>'
             f'<th>lasted</th></tr>{rows}</table></section>')
 
 
@@ -181,7 +181,7 @@ def _facts(record: Record) -> str:
         rows = ''.join(f'<tr><td>{html.escape(name)}</td><td>{html.escape(_word(value))}</td></tr>'
                        for name, value in facts.items())
         blocks += f'<div><h3>{html.escape(heading)}</h3><table>{rows}</table></div>'
-    return f'<section class="facts"><h2>Facts</h2>{blocks}</section>' if blocks else ''
+    return f'<section><h2>Facts</h2><div class="facts">{blocks}</div></section>' if blocks else ''
 
 
 def _picture(picture: Picture, before: str = '') -> str:
@@ -211,4 +211,4 @@ def _word(value: Scalar) -> str:
         return 'true' if value else 'false'
     if isinstance(value, float):
         return f'{value:.6g}' if math.isfinite(value) else 'not known'
-    return str(value)
+    return str(value) or 'none'

@@ -12,7 +12,7 @@ name       unit           columns
 error      px             error
 twist      m/s, rad/s     vx, vy, vz, wx, wy, wz: as commanded, camera in its own frame
 caps       m/s, rad/s     linear, angular: the caps in force
-points     1              seen
+points     1              seen, at the time they were heard of
 condition  1              condition
 latency    ms             any stages of the way from image to command, in order
 offset     m, rad         x, y, z, rx, ry, rz: the true camera in the frame it had when taught

@@ -46,7 +46,7 @@ class Stop:
 
     @property
     def reaction(self) -> float | None:
-        """Return the seconds from the last points seen to exact zero; None when not known."""
+        """Return the seconds from the last points heard to exact zero; None when not known."""
         if self.last_seen is None or self.still is None:
             return None
         return (self.still - self.last_seen) / SECOND_NS

@@ -33,9 +33,10 @@ img {{ display: block; width: 100%; height: auto; }}
 .paths {{ max-width: 760px; }}
 .row {{ display: grid; gap: 14px; grid-template-columns: repeat(3, 1fr); margin-top: 20px; }}
 .around .row {{ margin-top: 0; }}
-.tiles {{ display: flex; flex-wrap: wrap; gap: 10px 34px; margin: 18px 0 4px; }}
+.tiles {{ display: grid; grid-template-columns: repeat(auto-fit, minmax(118px, 1fr));
+  gap: 10px 18px; margin: 18px 0 4px; }}
 .tiles b {{ display: block; font-size: 22px; line-height: 1.25; }}
-.tiles span {{ color: {palette.SOFT}; font-size: 13px; }}
+.tiles span {{ display: block; color: {palette.SOFT}; font-size: 13px; line-height: 1.35; }}
 table {{ border-collapse: collapse; width: 100%; font-size: 14px; }}
 th {{ text-align: left; font-weight: 600; color: {palette.SOFT}; font-size: 13px; }}
 td, th {{ padding: 5px 14px 5px 0; border-bottom: 1px solid {palette.RULE}; vertical-align: top; }}
@@ -47,13 +48,12 @@ td, th {{ padding: 5px 14px 5px 0; border-bottom: 1px solid {palette.RULE}; vert
 .bar i, .bar u {{ display: inline-block; height: 11px; background: {palette.GOAL}; }}
 .bar u {{ opacity: 0.35; }}
 .calm {{ color: {palette.SOFT}; }}
-.facts {{ columns: 2; column-gap: 40px; }}
-.facts h2 {{ column-span: all; }}
+.facts {{ columns: 3; column-gap: 28px; }}
 .facts div {{ margin-bottom: 14px; }}
-.facts h3 {{ margin-top: 0; break-after: avoid; }}
-.facts table {{ font-size: 13px; }}
-.facts td {{ padding: 2px 10px 2px 0; overflow-wrap: anywhere; }}
-.facts td:last-child {{ width: 45%; }}
+.facts h3 {{ margin: 0 0 4px; font-size: 13px; break-after: avoid; }}
+.facts table {{ font-size: 11.5px; }}
+.facts td {{ padding: 1px 8px 1px 0; overflow-wrap: anywhere; line-height: 1.4; }}
+.facts td:last-child {{ width: 42%; }}
 footer {{ margin-top: 34px; padding-top: 12px; border-top: 1px solid {palette.RULE};
   color: {palette.SOFT}; font-size: 13px; }}
 footer p {{ margin: 0 0 6px; }}
@@ -69,7 +69,7 @@ footer p {{ margin: 0 0 6px; }}
   * {{ print-color-adjust: exact; -webkit-print-color-adjust: exact; }}
   figure, tr, header, .around h3 + .row {{ break-inside: avoid; }}
   h2, h3 {{ break-after: avoid; }}
-  .facts table {{ font-size: 8pt; }}
+  .facts table {{ font-size: 7pt; }}
   .paths {{ max-width: 150mm; }}
 }}
 """

@@ -24,6 +24,7 @@ import typing
 from collections.abc import Iterator, Sequence
 from importlib import metadata
 
+from servo_nodes import __version__
 from servo_nodes.report import page, record
 from servo_nodes.report.drawing import MissingExtra
 from servo_nodes.ros.demo_processes import Children, Trouble, free_domain, isolated
@@ -37,7 +38,7 @@ LINE_PERIOD_S, SPARSE_PERIOD_S = 0.1, 1.0
 _NEEDED = {
     'matplotlib': "pip install 'servo_nodes[report]', or apt install python3-matplotlib",
     'rclpy': "source a ROS 2 installation, or pip install 'servo_nodes[standalone]'"}
-_PACKAGES = ('servo_nodes', 'numpy', 'opencv-python-headless', 'opencv-python', 'scipy',
+_PACKAGES = ('numpy', 'opencv-python-headless', 'opencv-python', 'scipy',
              'transforms3d', 'matplotlib')
 
 
@@ -212,7 +213,8 @@ def _facts(outcome: Outcome, options: argparse.Namespace,
         result = {'from engaging to settled': f'{outcome.settle_s:.1f} s', **result}
     return {'Result': result, 'Run': {'start': start.words(), 'seed': options.seed,
                                       'platform': platform.platform(terse=True)},
-            'Versions': {'python': platform.python_version(), **_versions()},
+            'Versions': {'servo_nodes': __version__, 'python': platform.python_version(),
+                         **_versions()},
             **{f'Parameters of the {node}': values
                for node, values in outcome.parameters.items()}}
 

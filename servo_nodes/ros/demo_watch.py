@@ -181,7 +181,7 @@ class Watch:
         arrived = self._arrivals.pop(view.stamp, None)
         if arrived is not None:
             self._delivered = ((arrived - view.stamp) / 1e6, max(0, now - arrived) / 1e6)
-        self._note('points', view.stamp, len(view))
+        self._note('points', now, len(view))
         if self.recording and len(view) and self.camera is not None:
             self.recorder.points(view.stamp, view.ids,
                                  self.camera.pixels_from_normalised(view.points_xy),
@@ -230,7 +230,7 @@ class Watch:
             goal = self.camera.pixels_from_normalised(self.view.goal_xy)
         speed = float(np.linalg.norm(self.twist[:3])), float(np.linalg.norm(self.twist[3:]))
         return overlay(pixels, points_px=now, goal_px=goal, state=self.state, reason=self.reason,
-                       text=self.detail, error_px=self.error_px, points=(len(now), len(now)),
+                       text=self.detail, error_px=self.error_px, points=(len(now), None),
                        speed=speed, caps=self.caps)
 
 
@@ -252,7 +252,7 @@ def _plain(value: ParameterValue) -> bool | int | float | str:
         if value.type == kind:
             found = getattr(value, field)
             return ', '.join(f'{item:.6g}' for item in found) if kind == 8 else found
-    return ''
+    return 'none'
 
 
 def speeds(twist: Floats) -> tuple[float, float]:
