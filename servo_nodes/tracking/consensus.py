@@ -49,13 +49,17 @@ def log10_alarms(pairs: int, agreeing: int, threshold_px: float, area_px: float)
 
 
 def log10_chance(expected: int, verified: int) -> float:
-    """Return log10 of the chance that so many of the expected wrong patches pass."""
-    if not 0 < verified <= expected:
+    """Return log10 of a bound on the chance that so many of the expected wrong patches pass.
+
+    The bound on the binomial's tail is Chernoff's: exp(-m D(v/m || p)), D the relative entropy.
+    """
+    share = verified / max(expected, 1)
+    if not BY_CHANCE < share <= 1.0:
         return 0.0
-    terms = [_log10_choose(expected, j) + j * math.log10(BY_CHANCE)
-             + (expected - j) * math.log10(1 - BY_CHANCE) for j in range(verified, expected + 1)]
-    peak = max(terms)
-    return peak + math.log10(sum(10 ** (term - peak) for term in terms))
+    nats = share * math.log(share / BY_CHANCE)
+    if share < 1.0:
+        nats += (1 - share) * math.log((1 - share) / (1 - BY_CHANCE))
+    return -expected * nats / math.log(10)
 
 
 def plane_through(goal_xy: Floats, xy: Floats,
@@ -63,22 +67,21 @@ def plane_through(goal_xy: Floats, xy: Floats,
     """Return the homography most pairs agree on and which do; coordinates normalised, (N, 2)."""
     if len(xy) < 4:
         return None
-    # Scaled to about pixels: the estimator's own tolerances are made for those.
-    scale = 1.0 / threshold
-    matrix, inside = cv2.findHomography(goal_xy * scale, xy * scale, cv2.USAC_MAGSAC, 1.0,
+    # In units of the threshold: the estimator's own tolerances are made for about pixels.
+    matrix, inside = cv2.findHomography(goal_xy / threshold, xy / threshold, cv2.USAC_MAGSAC, 1.0,
                                         maxIters=_ROUNDS, confidence=_CONFIDENCE)
     if matrix is None or not np.isfinite(matrix).all():
         return None
-    unscale = np.diag([1 / scale, 1 / scale, 1.0])
-    return (unscale @ matrix @ np.linalg.inv(unscale),
-            np.asarray(inside).reshape(-1).astype(bool))
+    units = np.array([threshold, threshold, 1.0])
+    return (matrix * units[:, None] / units, np.asarray(inside).reshape(-1).astype(bool))
 
 
 def spread_px(uv: Floats) -> float:
     """Return the standard deviation of points (N, 2) along the direction in which it is least."""
     if len(uv) < 3:
         return 0.0
-    return float(np.sqrt(max(np.linalg.eigvalsh(np.cov(uv.T))[0], 0.0)))
+    (a, c), (_, b) = np.cov(uv, rowvar=False)
+    return math.sqrt(max((a + b) / 2 - math.hypot((a - b) / 2, c), 0.0))
 
 
 def _log10_choose(n: int, k: int) -> float:

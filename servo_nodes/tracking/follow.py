@@ -29,7 +29,7 @@ from servo_nodes.values import Floats
 _cv: typing.Any = cv2
 Index = npt.NDArray[np.intp]
 
-WINDOW, LEVELS = (13, 13), 3
+WINDOW, LEVELS = (15, 15), 3
 _STOP = (_cv.TERM_CRITERIA_COUNT | _cv.TERM_CRITERIA_EPS, 12, 0.03)
 _MOST_RETURN_PX, _AGREE_PX, _LEAST_CARRIED = 0.5, 2.0, 6
 _FLOOR_PX = 0.03
@@ -93,10 +93,12 @@ def carried(reference: Reference, camera: Camera, last: Sight, before: Grey,
     # The lens is linearised where the point was: near enough for a first guess.
     moved = uv[kept] - last.uv[kept]
     xy = last.xy[kept] + (last.to_normalised[kept] @ moved[:, :, None])[:, :, 0]
-    plane = plane_through(reference.xy[last.index[kept]], xy, _AGREE_PX / camera.fx)
+    goal_xy = reference.xy[last.index[kept]]
+    plane = plane_through(goal_xy, xy, _AGREE_PX / camera.fx)
     if plane is None or np.count_nonzero(plane[1]) < _LEAST_CARRIED:
         return None
-    return homography.normed(plane[0], reference.xy[last.index])
+    matrix = plane[0]
+    return matrix if homography.depth_ratios(matrix, goal_xy).min() > 0 else -matrix
 
 
 def verified(reference: Reference, camera: Camera, grey: Grey, matrix: Floats, limits: Limits, *,

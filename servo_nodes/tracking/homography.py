@@ -29,6 +29,7 @@ from servo_nodes.values import Floats
 TUKEY = 4.685
 # The median of |e| for two independent Gaussian components of scale 1 (Rayleigh): sqrt(2 ln 2).
 _RAYLEIGH_MEDIAN = 1.17741
+_LEAST_BELOW = 1e-12
 
 
 @dataclass(frozen=True, eq=False)
@@ -148,24 +149,26 @@ def _weighed(matrix: Floats, goal_xy: Floats, xy: Floats,
 
 
 def _linear(goal_xy: Floats, xy: Floats, weights: Floats, former: Floats | None) -> Floats | None:
-    count = len(xy)
-    if former is None:
-        below = np.ones(count)
-    else:
-        below = goal_xy @ former[2, :2] + former[2, 2]
-        below = np.where(np.abs(below) > 1e-6, below, 1e-6)
+    """Solve p . h1 - x p . h3 = 0, p . h2 - y p . h3 = 0 with p = (x_g, y_g, 1) and h33 = 1.
+
+    The normal equations of all points are sums of w (1, x, y, x^2 + y^2) times p p^T: one product.
+    """
+    p = np.ones((len(xy), 3))
+    p[:, :2] = goal_xy
     # Divided by the former denominator, the algebraic residual is the geometric one.
-    root = np.sqrt(weights) / below
-    rows = np.zeros((2, count, 9))
-    rows[0, :, 0:2] = rows[1, :, 3:5] = goal_xy * root[:, None]
-    rows[0, :, 2] = rows[1, :, 5] = root
-    ends = (-xy * root[:, None]).T
-    rows[:, :, 6:8] = ends[:, :, None] * goal_xy
-    rows[:, :, 8] = -ends
-    flat = rows.reshape(-1, 9)
-    normal = flat.T @ flat
+    below = 1.0 if former is None else p @ former[2]
+    factors = np.ones((4, len(xy)))
+    factors[1:3] = xy.T
+    factors[3] = (xy * xy).sum(-1)
+    factors *= weights / np.maximum(below * below, _LEAST_BELOW)
+    one, x, y, square = (factors @ (p[:, :, None] * p[:, None, :]).reshape(-1, 9)).reshape(4, 3, 3)
+    normal = np.zeros((9, 9))
+    normal[:3, :3] = normal[3:6, 3:6] = one
+    normal[:3, 6:] = normal[6:, :3] = -x
+    normal[3:6, 6:] = normal[6:, 3:6] = -y
+    normal[6:, 6:] = square
     try:
-        solution = np.linalg.solve(normal[:8, :8], normal[:8, 8])
+        solution = np.linalg.solve(normal[:8, :8], -normal[:8, 8])
     except np.linalg.LinAlgError:
         return None
     matrix = np.append(solution, 1.0).reshape(3, 3)

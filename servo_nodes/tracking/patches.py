@@ -107,7 +107,7 @@ class Patches:
             Likeness -1 where a patch leaves the image, or its step or gain is senseless.
         """
         good = _inside(grey.shape, uv, local)
-        solver = self._solver[index]
+        solver = self._solver.take(index, axis=0)
         first = at = np.where(good[:, None], uv, RADIUS)
         # One product makes all sampling positions: rows u then v of (A | u) times (o, 1).
         place = np.empty((2, len(at), 3), np.float32)
