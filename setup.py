@@ -14,10 +14,11 @@ TOOLS = {'servo_demo': 'ros.demo', 'servo_drill': 'ros.drill', 'servo_bench': 'o
 
 # ROS 2 as wheels, for machines without a ROS installation; a ROS machine needs none of them.
 STANDALONE = [
-    'ros-rclpy', 'ros-rmw-fastrtps-cpp', 'ros-builtin-interfaces', 'ros-diagnostic-msgs',
-    'ros-geometry-msgs', 'ros-lifecycle-msgs', 'ros-rcl-interfaces', 'ros-rosgraph-msgs',
-    'ros-sensor-msgs', 'ros-std-msgs', 'ros-std-srvs',
+    'ros-rclpy', 'ros-rmw-fastrtps-cpp', 'ros-diagnostic-msgs', 'ros-geometry-msgs',
+    'ros-lifecycle-msgs', 'ros-rcl-interfaces', 'ros-rosgraph-msgs', 'ros-sensor-msgs',
+    'ros-std-msgs', 'ros-std-srvs',
 ]
+
 
 class Install(install):
     """Let setup.cfg place the executables for colcon and for distribution builds only.
@@ -61,7 +62,7 @@ setup(
     extras_require={
         'standalone': STANDALONE,
         'report': ['matplotlib>=3.7'],
-        'bags': ['rosbags>=0.10'],
+        'bags': ['rosbags>=0.11', 'lz4>=4.3', 'backports.zstd>=1.0; python_version < "3.14"'],
         'test': [
             'pytest>=7.4', 'pytest-timeout>=2.2', 'pytest-cov>=4.1', 'hypothesis>=6.90',
             'pin>=2.7', 'pytransform3d>=3.5', 'scikit-image>=0.22',

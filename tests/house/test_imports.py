@@ -30,14 +30,16 @@ TABLE = {
     'report': (LEAVES, {'numpy', 'cv2', 'matplotlib'}),
     'ros': (ROS_BELOW, {'numpy', 'cv2', 'yaml', 'rclpy', 'rpyutils', 'tf2_ros', 'bondpy',
                         'rosbags', 'ament_index_python', *MESSAGES}),
-    'offline': (ROS_BELOW, {'numpy', 'cv2', 'scipy', 'yaml', 'rosbags'}),
+    'offline': (ROS_BELOW, {'numpy', 'cv2', 'scipy', 'yaml', 'rosbags', 'lz4', 'backports',
+                            'compression'}),
 }
 CORES = ('tracking', 'control', 'simulation')
 # What would let a clock, a file, a log, a network or hidden chance into a core.
 WORLD = {'asyncio', 'concurrent', 'datetime', 'io', 'logging', 'multiprocessing', 'os', 'pathlib',
          'random', 'secrets', 'shutil', 'signal', 'socket', 'subprocess', 'sys', 'tempfile',
          'threading', 'time', 'warnings'}
-OPTIONAL = {'matplotlib', 'rosbags', 'tf2_ros', 'bondpy', 'distributed', 'psutil'}
+OPTIONAL = {'matplotlib', 'rosbags', 'lz4', 'backports', 'compression', 'tf2_ros', 'bondpy',
+            'distributed', 'psutil'}
 MODULES = [pytest.param(path, id=source.name_of(path)) for path in source.modules()]
 
 

@@ -23,9 +23,11 @@ KEYS = {'numpy': 'python3-numpy', 'cv2': 'python3-opencv', 'scipy': 'python3-sci
         'transforms3d': 'python3-transforms3d', 'yaml': 'python3-yaml',
         'matplotlib': 'python3-matplotlib'}
 # Used where they are installed, named with their remedy where they are not.
-OPTIONAL = {'tf2_ros', 'bondpy', 'rosbags', 'distributed', 'psutil'}
+OPTIONAL = {'tf2_ros', 'bondpy', 'rosbags', 'lz4', 'backports', 'compression', 'distributed',
+            'psutil'}
 # Import name: the wheel that brings it.
-WHEELS = {'cv2': 'opencv-python-headless', 'yaml': 'PyYAML'}
+WHEELS = {'cv2': 'opencv-python-headless', 'yaml': 'PyYAML', 'backports': 'backports.zstd',
+          'compression': 'backports.zstd'}
 
 
 @functools.cache
