@@ -21,7 +21,7 @@ from servo_nodes.camera import Camera
 from servo_nodes.simulation import render, sensor, surroundings
 from servo_nodes.simulation.faults import Channel, damaged_image
 from servo_nodes.simulation.plant import Plant
-from servo_nodes.simulation.scene import HOME_DISTANCE, scene_from_settings
+from servo_nodes.simulation.scene import HOME_DISTANCE, Scene, scene_from_settings
 from servo_nodes.simulation.settings import SimulatorSettings
 from servo_nodes.simulation.texture import Pixels
 from servo_nodes.values import SECOND_NS, Calibration, Floats, Stamp, Twist, View
@@ -107,6 +107,11 @@ class Simulator:
         pose: Floats = self.home @ motion.pose_from_parts(
             motion.rotation_from_vector(start.rotation), start.translation)
         return pose
+
+    @property
+    def scene(self) -> Scene:
+        """Return what there is to see."""
+        return self._scene
 
     @property
     def camera(self) -> Camera:

@@ -1,0 +1,182 @@
+# Copyright 2026 servo_nodes maintainers
+# SPDX-License-Identifier: Apache-2.0
+"""A rig for trials: real nodes in real processes, and an observer of the commands in this one.
+
+Used by the drill and by the tests. Each rig has a domain of its own and stays on this machine.
+"""
+
+from __future__ import annotations
+
+import os
+import pathlib
+import signal
+import subprocess
+import sys
+import tempfile
+import time
+import typing
+from collections.abc import Callable, Mapping, Sequence
+
+import rclpy
+from rclpy.context import Context
+from rclpy.executors import SingleThreadedExecutor
+from rclpy.node import Node
+
+from servo_nodes.values import SECOND_NS
+
+NAMESPACE = '/servo'
+
+
+class Child:
+    """A node in a process of its own; what it says is kept in a file.
+
+    Parameters
+    ----------
+    node : str, `tracker`, `controller` or `simulator`
+    env : mapping, the environment
+    log : path of the file
+    arguments : ROS arguments after `--ros-args`
+    """
+
+    def __init__(self, node: str, env: Mapping[str, str], log: pathlib.Path,
+                 arguments: Sequence[str] = ()) -> None:
+        self.node, self.log = node, log
+        code = f'from servo_nodes.ros.{node}_node import main; main()'
+        with log.open('ab') as file:
+            self._process = subprocess.Popen(
+                [sys.executable, '-c', code, '--ros-args', *arguments], env=dict(env),
+                stdout=file, stderr=subprocess.STDOUT, stdin=subprocess.DEVNULL)
+
+    @property
+    def pid(self) -> int:
+        """Return the process's number."""
+        return self._process.pid
+
+    @property
+    def runs(self) -> bool:
+        """Return whether the process is alive."""
+        return self._process.poll() is None
+
+    def send(self, number: signal.Signals) -> None:
+        """Send a signal."""
+        self._process.send_signal(number)
+
+    def end(self, number: signal.Signals = signal.SIGINT, timeout: float = 5.0) -> int:
+        """Send a signal and return the exit code; kill what does not listen."""
+        if self.runs:
+            self.send(signal.SIGCONT)
+            self.send(number)
+        try:
+            return self._process.wait(timeout)
+        except subprocess.TimeoutExpired:
+            self._process.kill()
+            return self._process.wait(timeout)
+
+    def wait(self, timeout: float) -> int:
+        """Return the exit code of a process that ends by itself."""
+        return self._process.wait(timeout)
+
+    def said(self) -> str:
+        """Return what it has printed so far."""
+        return self.log.read_text(errors='replace')
+
+
+class Rig:
+    """Children, and a node of our own that watches and talks to them.
+
+    Parameters
+    ----------
+    domain : int, ROS domain
+    env : mapping, additions to the environment of the children
+    """
+
+    def __init__(self, domain: int, env: Mapping[str, str] | None = None) -> None:
+        here = str(pathlib.Path(__file__).resolve().parents[2])
+        paths = [here, *filter(None, [os.environ.get('PYTHONPATH')])]
+        self._env = {**os.environ, 'ROS_DOMAIN_ID': str(domain), 'PYTHONUNBUFFERED': '1',
+                     'ROS_AUTOMATIC_DISCOVERY_RANGE': 'LOCALHOST',
+                     'PYTHONPATH': os.pathsep.join(paths), **(env or {})}
+        os.environ['ROS_AUTOMATIC_DISCOVERY_RANGE'] = 'LOCALHOST'
+        self._folder = tempfile.TemporaryDirectory(prefix='servo_rig_')
+        self.folder = pathlib.Path(self._folder.name)
+        self.children: list[Child] = []
+        self._context = Context()
+        rclpy.init(context=self._context, domain_id=domain)
+        self.node = Node('observer', context=self._context, namespace=NAMESPACE)
+        self._executor = SingleThreadedExecutor(context=self._context)
+        self._executor.add_node(self.node)
+
+    def __enter__(self) -> Rig:
+        return self
+
+    def __exit__(self, *error: object) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """End the children, then ourselves."""
+        for child in reversed(self.children):
+            child.end()
+        self._executor.shutdown(timeout_sec=1.0)
+        self.node.destroy_node()
+        rclpy.try_shutdown(context=self._context)
+        self._folder.cleanup()
+
+    def start(self, node: str, *, namespace: str = NAMESPACE, remap: Mapping[str, str] | None = None,
+              arguments: Sequence[str] = (), env: Mapping[str, str] | None = None,
+              **parameters: object) -> Child:
+        """Start a node; parameters are given with `__` for each dot."""
+        given = ['-r', f'__ns:={namespace}']
+        for old, new in (remap or {}).items():
+            given += ['-r', f'{old}:={new}']
+        for name, value in parameters.items():
+            given += ['-p', f'{name.replace("__", ".")}:={_written(value)}']
+        log = self.folder / f'{node}_{len(self.children)}.log'
+        child = Child(node, {**self._env, **(env or {})}, log, [*given, *arguments])
+        self.children.append(child)
+        return child
+
+    def spin(self, seconds: float = 0.02) -> None:
+        """Let messages in, for at most so long."""
+        self._executor.spin_once(timeout_sec=seconds)
+
+    def until(self, ready: Callable[[], typing.Any], timeout: float = 10.0, *,
+              what: str = 'a condition') -> typing.Any:
+        """Let messages in until `ready` says something true, which is returned.
+
+        Raises
+        ------
+        TimeoutError
+            When it does not within `timeout` seconds.
+        """
+        end = time.monotonic_ns() + round(timeout * SECOND_NS)
+        while not (found := ready()):
+            if time.monotonic_ns() > end:
+                raise TimeoutError(f'expected {what} within {timeout:g} s, got nothing')
+            self.spin()
+        return found
+
+    def watch(self, seconds: float) -> None:
+        """Let messages in for so long."""
+        end = time.monotonic_ns() + round(seconds * SECOND_NS)
+        while (left := end - time.monotonic_ns()) > 0:
+            self.spin(left / SECOND_NS)
+
+    def call(self, kind: type, name: str, request: typing.Any = None,
+             timeout: float = 10.0) -> typing.Any:
+        """Call a service and return its answer."""
+        client = self.node.create_client(kind, name)
+        try:
+            self.until(client.service_is_ready, timeout, what=f'service {name}')
+            future = client.call_async(kind.Request() if request is None else request)
+            self.until(future.done, timeout, what=f'an answer of {name}')
+            return future.result()
+        finally:
+            self.node.destroy_client(client)
+
+
+def _written(value: object) -> str:
+    if isinstance(value, bool):
+        return str(value).lower()
+    if isinstance(value, (tuple, list)):
+        return '[' + ', '.join(_written(item) for item in value) + ']'
+    return repr(value) if isinstance(value, float) else str(value)

@@ -1,0 +1,161 @@
+# Copyright 2026 servo_nodes maintainers
+# SPDX-License-Identifier: Apache-2.0
+"""The simulator as a node: twists in, images out, in real time or leading the time itself."""
+
+from __future__ import annotations
+
+import sys
+import threading
+import time
+import typing
+from collections.abc import Mapping
+
+import numpy as np
+from geometry_msgs.msg import PoseStamped, TwistStamped
+from rosgraph_msgs.msg import Clock as ClockMessage
+from sensor_msgs.msg import CameraInfo
+from sensor_msgs.msg import Image as ImageMessage
+from std_srvs.srv import Trigger
+
+from servo_nodes import motion, wire
+from servo_nodes.ros.diagnostics import OK, Diagnostics, versions
+from servo_nodes.ros.meters import Durations
+from servo_nodes.ros.options import SimulatorNodeSettings
+from servo_nodes.ros.pacer import Pacer
+from servo_nodes.ros.shell import Shell, run
+from servo_nodes.simulation.simulator import Picture, Simulator, SimulatorSettings
+from servo_nodes.values import Image, Stamp
+
+CLOCK_RATE = 200.0
+CLOCK_START = 1_000_000_000
+OUTPUTS = {'image': ImageMessage, 'camera_info': CameraInfo, 'depth': ImageMessage,
+           'true_pose': PoseStamped}
+
+
+class SimulatorNode(Shell):
+    """Moves the simulated camera and publishes what it sees."""
+
+    def __init__(self) -> None:
+        super().__init__('simulator', SimulatorSettings, SimulatorNodeSettings)
+        self._lock = threading.Lock()
+
+    def configure(self) -> str:
+        """Make the core and its doors."""
+        shell, doors = self.parameters[SimulatorNodeSettings], self.doors
+        self.simulator = Simulator(self.parameters[SimulatorSettings],
+                                   np.random.default_rng(shell.seed))
+        self._out = {name: doors.publish(kind, name) for name, kind in OUTPUTS.items()}
+        if shell.clock.lead:
+            self._out['/clock'] = doors.publish(ClockMessage, '/clock')
+        doors.listen(TwistStamped, 'camera_twist', self._take_twist)
+        doors.serve(Trigger, '~/restart', self._restart)
+        self._diagnostics, self._work = Diagnostics(self, 'simulation'), Durations('exposure')
+        return ''
+
+    def activate(self) -> str:
+        """Let time run."""
+        self._origin = time.monotonic_ns(), self.simulator.now
+        self._pacers = [Pacer(self._rate(), self._expose, self.fail, 'camera')]
+        if '/clock' in self._out:
+            self._pacers.append(Pacer(CLOCK_RATE, self._tell_time, self.fail, 'clock'))
+        for pacer in self._pacers:
+            pacer.start()
+        self._timer = self.every(1.0, self._diagnose)
+        return ''
+
+    def deactivate(self) -> str:
+        """Let time stand still."""
+        for pacer in self._pacers:
+            pacer.end()
+        self.destroy_timer(self._timer)
+        return ''
+
+    def rest(self) -> None:
+        """Stop exposing."""
+        if self.active:
+            self.deactivate()
+
+    def adopt(self, settings: Mapping[type, object]) -> str:
+        """Take new settings; the arm stays where it is, `start` waits for the next restart."""
+        new = settings.get(SimulatorSettings)
+        if self.configured and new is not None:
+            with self._lock:
+                self.simulator.adopt(typing.cast(SimulatorSettings, new))
+            if self.active:
+                self._pacers[0].period_ns = round(1e9 / new.camera.rate / self._speed())
+        return ''
+
+    def _speed(self) -> float:
+        clock = self.parameters[SimulatorNodeSettings].clock
+        return clock.speed if clock.lead else 1.0
+
+    def _rate(self) -> float:
+        return self.simulator.settings.camera.rate * self._speed()
+
+    def _time(self, steady: Stamp) -> Stamp:
+        """Return the simulated time, ns, at a steady one."""
+        began, simulated = self._origin
+        return simulated + round((steady - began) * self._speed())
+
+    def _expose(self, now: Stamp, late: Stamp) -> None:
+        with self._lock:
+            self.simulator.advance_to(max(self._time(now), self.simulator.now))
+            picture = self.simulator.expose()
+        if '/clock' in self._out:
+            stamp = CLOCK_START + picture.stamp
+        else:
+            stamp = self.now_ns() - (time.monotonic_ns() - now)
+        self._publish(picture, stamp)
+        self._work.add(time.monotonic_ns() - now)
+
+    def _publish(self, picture: Picture, stamp: Stamp) -> None:
+        out, frame = self._out, picture.calibration.frame_id
+        info = CameraInfo()
+        wire.fill_camera_info(info, picture.calibration, stamp)
+        out['camera_info'].publish(info)
+        message = ImageMessage()
+        wire.fill_image(message, Image(picture.image, picture.encoding, stamp, frame))
+        out['image'].publish(message)
+        wanted = self.parameters[SimulatorNodeSettings].publish_depth
+        if wanted and out['depth'].get_subscription_count():
+            message = ImageMessage()
+            wire.fill_image(message, Image(picture.depth, '32FC1', stamp, frame))
+            out['depth'].publish(message)
+        pose = PoseStamped()
+        wire.fill_time(pose.header.stamp, stamp)
+        pose.header.frame_id = self.parameters[SimulatorNodeSettings].target_frame
+        wire.fill_pose(pose.pose, picture.pose[:3, 3],
+                       motion.quaternion_from_rotation(picture.pose[:3, :3]))
+        out['true_pose'].publish(pose)
+
+    def _tell_time(self, now: Stamp, late: Stamp) -> None:
+        message = ClockMessage()
+        wire.fill_time(message.clock, CLOCK_START + self._time(now))
+        self._out['/clock'].publish(message)
+
+    def _take_twist(self, message: TwistStamped) -> None:
+        if not self.active:
+            return
+        twist = wire.twist_from_message(message)
+        try:
+            with self._lock:
+                self.simulator.apply(twist, self._time(time.monotonic_ns()))
+        except ValueError as error:
+            self.warn_seldom('twist', f'camera_twist: {error}')
+
+    def _restart(self, request: Trigger.Request, response: Trigger.Response) -> Trigger.Response:
+        with self._lock:
+            self.simulator.restart()
+        start = self.simulator.settings.start
+        response.success = True
+        response.message = f'at the start: {start.translation} m, {start.rotation} rad from home'
+        return response
+
+    def _diagnose(self) -> None:
+        self._diagnostics.say(OK, 'exposing', {'simulated_s': self.simulator.now / 1e9,
+                                               **self._work.figures(), **versions()})
+
+
+def main() -> None:
+    """Run the node."""
+    sys.exit(run(SimulatorNode))
