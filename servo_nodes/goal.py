@@ -91,7 +91,7 @@ def save(goal: Goal, folder: str | pathlib.Path) -> None:
         text = yaml.safe_dump(_page(goal), sort_keys=False, allow_unicode=True, width=99)
         (folder / 'goal.yaml').write_text(text, encoding='utf-8')
     except OSError as error:
-        raise ValueError(f'goal folder {folder}: expected a place to write, got {error}') from error
+        raise ValueError(f'{folder}: expected a place to write, got {error}') from error
 
 
 def load(folder: str | pathlib.Path) -> Goal:
@@ -133,7 +133,8 @@ def png_size(data: bytes) -> tuple[int, int] | None:
 def _checked_plane(plane: npt.ArrayLike) -> Floats:
     numbers: Floats = np.array(plane, dtype=np.float64)
     if numbers.shape != (4,) or not np.isfinite(numbers).all():
-        raise ValueError(f'plane: expected four finite numbers nx, ny, nz, d, got {numbers.tolist()}')
+        raise ValueError('plane: expected four finite numbers nx, ny, nz, d, '
+                         f'got {numbers.tolist()}')
     length = float(np.linalg.norm(numbers[:3]))
     if not (0.99 < length < 1.01 and 1e-3 <= numbers[3] <= 1e3):
         raise ValueError('plane: expected a unit normal and a distance from 0.001 to 1000 m, '

@@ -116,7 +116,8 @@ def strong_points(grey: Grey, count: int, margin: int) -> Floats:
     mask = np.zeros_like(grey)
     mask[margin:height - margin, margin:width - margin] = 255
     gap = max(4.0, 0.45 * float(np.sqrt(height * width / count)))
-    found: typing.Any = _cv.goodFeaturesToTrack(grey, 6 * count, 0.005, gap, mask=mask, blockSize=7)
+    found: typing.Any = _cv.goodFeaturesToTrack(
+        grey, 6 * count, 0.005, gap, mask=mask, blockSize=7)
     if found is None:
         return np.empty((0, 2))
     uv = np.rint(np.asarray(found, dtype=np.float64).reshape(-1, 2))
