@@ -13,7 +13,7 @@ from servo_nodes.report import palette
 from servo_nodes.report.drawing import Drawing, pyplot_style, saved
 from servo_nodes.report.record import Path, Record
 from servo_nodes.report.space import draw_camera
-from servo_nodes.report.stops import STOPPED, spans
+from servo_nodes.report.stops import STOPPED, spans, stops
 from servo_nodes.values import SECOND_NS, Floats, Stamp
 
 MOST_PATHS = 40
@@ -136,7 +136,6 @@ def _strip(axis: typing.Any, record: Record) -> None:
     axis.spines[['left', 'bottom']].set_visible(False)
     axis.tick_params(axis='x', length=0)
     whole = max(1, record.end - record.origin)
-    free = -math.inf
     for span in spans(record):
         start, state = _second(record, span.start), span.event.state
         colour = palette.STATES.get(state, palette.RULE)
@@ -145,13 +144,16 @@ def _strip(axis: typing.Any, record: Record) -> None:
         if (span.end - span.start) / whole > 0.012 * len(state):
             axis.text(start + span.seconds / 2, 0.46, state, ha='center', va='center',
                       color=palette.text_on(colour), fontsize=8.5)
-        word = '' if span.event.reason == 'none' else span.event.reason.replace('_', ' ')
-        if state in STOPPED and (start - free) * SECOND_NS / whole > 0.0:
-            label = f'{word} at {start:.2f} s'
-            left = min(start, whole / SECOND_NS * (1 - 0.0115 * len(label)))
+    free = -math.inf
+    for stop in stops(record):
+        start = _second(record, stop.span.start)
+        label = f'{stop.span.event.reason.replace("_", " ")} at {start:.2f} s'
+        wide = whole / SECOND_NS * 0.0092 * len(label)
+        axis.plot([start, start], [1, 1.3], color=palette.INK, linewidth=0.8)
+        left = min(start, whole / SECOND_NS - wide)
+        if left >= free:
             axis.text(left, 1.25, label, ha='left', va='bottom', fontsize=8)
-            axis.plot([start, start], [1, 1.3], color=palette.INK, linewidth=0.8)
-            free = left + whole / SECOND_NS * 0.0115 * len(label)
+            free = left + wide
 
 
 def _stops(axis: typing.Any, record: Record) -> None:

@@ -52,9 +52,8 @@ def page(record: Record, figures: list[Drawing]) -> str:
         *(_figure(figure) for figure in figures if figure.name == 'time'),
         _stop_pictures(record, found),
         *(_figure(figure) for figure in figures if figure.name != 'time'),
-        _latency(record), _facts(record),
-        f'<footer><p>{CAUTIONS}</p><p class="mark">record {record.digest()}</p></footer>',
-        '</main></body></html>\n']
+        _latency(record), f'<p class="caution">{CAUTIONS}</p>', _facts(record),
+        f'<footer>record {record.digest()}</footer></main></body></html>\n']
     return '\n'.join(part for part in parts if part)
 
 
@@ -110,8 +109,8 @@ def _stop_table(record: Record, found: list[Stop]) -> str:
         f'<tr><td class="chip"><i style="background:{_colour(stop)}"></i>'
         f'{html.escape(stop.span.event.state)}</td>'
         f'<td>{_at(record, stop.span.start)}</td>'
-        f'<td><b>{html.escape(stop.span.event.reason.replace("_", " "))}</b>'
-        f'<br>{html.escape(stop.span.event.text)}</td>'
+        f'<td><b>{_spoken(stop.span.event.reason)}</b><br>{html.escape(stop.span.event.text)}'
+        f'{"".join(f"<br>then {_spoken(reason)}" for reason in stop.then)}</td>'
         f'<td>{_milliseconds(stop.reaction)}</td><td>{_milliseconds(stop.braking)}</td>'
         f'<td>{stop.span.seconds:.2f} s</td></tr>' for stop in found)
     return ('<section><h2>Every stop</h2><table class="stops"><tr><th>state</th><th>at</th>'
@@ -132,12 +131,12 @@ def _stop_pictures(record: Record, found: list[Stop]) -> str:
     rows = []
     for index in sorted(groups):
         title = 'Pictures' if index < 0 else (
-            f'Around {found[index].span.event.reason.replace("_", " ")} at '
+            f'Around {_spoken(found[index].span.event.reason)} at '
             f'{_at(record, found[index].span.start)}')
         pictures = sorted(groups[index], key=lambda picture: picture.stamp)
         cells = ''.join(_picture(picture, f'{_at(record, picture.stamp)}: ')
                         for picture in pictures)
-        rows.append(f'<h3>{html.escape(title)}</h3><div class="row three">{cells}</div>')
+        rows.append(f'<h3>{title}</h3><div class="row three">{cells}</div>')
     return f'<section class="around">{"".join(rows)}</section>'
 
 
@@ -192,6 +191,10 @@ def _picture(picture: Picture, before: str = '') -> str:
 
 def _uri(media: str, data: bytes) -> str:
     return f'data:{media};base64,{base64.b64encode(data).decode()}'
+
+
+def _spoken(reason: str) -> str:
+    return html.escape(reason.replace('_', ' '))
 
 
 def _at(record: Record, stamp: Stamp) -> str:

@@ -35,12 +35,14 @@ class Stop:
 
     Attributes
     ----------
-    span : Span, the time in `holding` or `faulted`
+    span : Span, the time in `holding` or `faulted`, with the reason that began it
+    then : other reasons that came up while it lasted
     last_seen : int or None, ns, the last time before it that points were seen
     still : int or None, ns, the first command of exact zero since then; None: never, or not known
     """
 
     span: Span
+    then: tuple[str, ...]
     last_seen: Stamp | None
     still: Stamp | None
 
@@ -65,9 +67,24 @@ def spans(record: Record) -> list[Span]:
 
 
 def stops(record: Record) -> list[Stop]:
-    """Return every span in which the controller held or had faulted, in order of time."""
-    return [Stop(span, _last_seen(record, span.start), _still(record, span))
-            for span in spans(record) if span.event.state in STOPPED]
+    """Return every time the controller held or had faulted, in order; reasons may change."""
+    groups: list[list[Span]] = []
+    for span in spans(record):
+        if span.event.state not in STOPPED:
+            continue
+        last = groups[-1][-1] if groups else None
+        if last is not None and (last.end, last.event.state) == (span.start, span.event.state):
+            groups[-1].append(span)
+        else:
+            groups.append([span])
+    return [_stop(record, group) for group in groups]
+
+
+def _stop(record: Record, group: list[Span]) -> Stop:
+    whole = Span(group[0].start, group[-1].end, group[0].event)
+    reasons = dict.fromkeys(span.event.reason for span in group)
+    return Stop(whole, tuple(reasons)[1:], _last_seen(record, whole.start),
+                _still(record, whole))
 
 
 def _last_seen(record: Record, before: Stamp) -> Stamp | None:

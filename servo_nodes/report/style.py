@@ -53,10 +53,10 @@ td, th {{ padding: 5px 14px 5px 0; border-bottom: 1px solid {palette.RULE}; vert
 .facts h3 {{ margin: 0 0 4px; font-size: 13px; break-after: avoid; }}
 .facts table {{ font-size: 11.5px; }}
 .facts td {{ padding: 1px 8px 1px 0; overflow-wrap: anywhere; line-height: 1.4; }}
-.facts td:last-child {{ width: 42%; }}
-footer {{ margin-top: 34px; padding-top: 12px; border-top: 1px solid {palette.RULE};
-  color: {palette.SOFT}; font-size: 13px; }}
-footer p {{ margin: 0 0 6px; }}
+.facts td:last-child {{ width: 38%; }}
+.caution {{ margin: 34px 0 0; padding: 12px 16px; border: 1px solid {palette.SOFT};
+  font-size: 13px; }}
+footer {{ margin-top: 12px; color: {palette.SOFT}; font-size: 11.5px; }}
 @media (max-width: 720px) {{
   main {{ padding: 16px; }}
   .row {{ grid-template-columns: 1fr; }}
@@ -67,7 +67,7 @@ footer p {{ margin: 0 0 6px; }}
   body {{ background: none; font-size: 9.5pt; }}
   main {{ max-width: none; padding: 0; }}
   * {{ print-color-adjust: exact; -webkit-print-color-adjust: exact; }}
-  figure, tr, header, .around h3 + .row {{ break-inside: avoid; }}
+  figure, tr, header, .caution, .around h3 + .row {{ break-inside: avoid; }}
   h2, h3 {{ break-after: avoid; }}
   .facts table {{ font-size: 7pt; }}
   .paths {{ max-width: 150mm; }}

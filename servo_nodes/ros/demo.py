@@ -77,6 +77,7 @@ class Words:
 
 def main(argv: Sequence[str] | None = None) -> None:
     """Run the demo and exit: 0 came home, 1 did not, 2 could not be run."""
+    signal.signal(signal.SIGTERM, _interrupt)
     sys.exit(run(argv))
 
 
@@ -84,7 +85,6 @@ def run(argv: Sequence[str] | None = None) -> int:
     """Run the demo; return the exit code."""
     options = _options(argv)
     words = Words(sys.stderr if options.json else sys.stdout)
-    signal.signal(signal.SIGTERM, _interrupt)
     try:
         for package, remedy in _NEEDED.items():
             _require(package, remedy)
@@ -130,6 +130,7 @@ def _options(argv: Sequence[str] | None) -> argparse.Namespace:
 
 
 def _demonstrate(options: argparse.Namespace, words: Words) -> int:
+    options.out.mkdir(parents=True, exist_ok=True)
     rng = random.Random()
     domain = free_domain(rng) if options.domain is None else options.domain
     environment = isolated(os.environ, domain)
@@ -138,7 +139,6 @@ def _demonstrate(options: argparse.Namespace, words: Words) -> int:
     from servo_nodes.ros.demo_run import Start
     start = Start() if options.start is None else Start(
         tuple(options.start[:3]), tuple(options.start[3:]))
-    options.out.mkdir(parents=True, exist_ok=True)
     words.say(page.CAUTIONS)
     words.say('This demo moves no robot: camera and arm are simulated, and no other machine can '
               f'reach them (domain {domain}, this machine only).\n')

@@ -53,3 +53,17 @@ def test_a_stop_that_never_reached_zero_has_no_reaction_time():
     recorder.note('twist', 5, 0, 0, 0, 0, 0, 1e-9)
     (stop,) = stops(recorder.record(Verdict(None, '')))
     assert stop.still is None
+
+
+def test_a_stop_whose_reason_changes_is_one_stop_with_both_reasons():
+    recorder = Recorder('changing')
+    for event in (Event(1, 'servoing'), Event(2, 'holding', 'features_silent'),
+                  Event(3, 'holding', 'features_stale'), Event(4, 'holding', 'features_silent'),
+                  Event(5, 'servoing'), Event(6, 'holding', 'image_silent'),
+                  Event(7, 'faulted', 'halted')):
+        recorder.turn(event)
+    found = stops(recorder.record(Verdict(None, '')))
+    assert [(stop.span.start, stop.span.event.reason, stop.then) for stop in found] == [
+        (2, 'features_silent', ('features_stale',)), (6, 'image_silent', ()),
+        (7, 'halted', ())]
+    assert found[0].span.end == 5
