@@ -85,13 +85,9 @@ class Plant:
             ticks = (self._now - self._since) // TICK_NS
             self._move_anchor(self._since + ticks * TICK_NS)
 
-    def pose(self) -> Floats:
-        """Return T_WC (4, 4) now."""
-        return self._moved(self._now)[0]
-
-    def velocity(self) -> Floats:
-        """Return the true twist (6,) of the camera now, in its own frame."""
-        return self._moved(self._now)[1]
+    def state(self) -> tuple[Floats, Floats]:
+        """Return T_WC (4, 4) and the true twist (6,) of the camera, in its own frame, now."""
+        return self._moved(self._now)
 
     def _executed(self, twist: Floats) -> Floats:
         """Return what the arm makes of a command: rounded, and seen through the hand-eye error."""
@@ -152,12 +148,14 @@ class Plant:
         if float(np.abs(after - self._goal).max()) < 1e-9:
             after = self._goal
         if self.settings.limited:
+            after = after.copy()
             for part, limit in ((slice(0, 3), self.settings.linear_acceleration),
                                 (slice(3, 6), self.settings.angular_acceleration)):
                 change = after[part] - velocity[part]
-                length, most = float(np.linalg.norm(change)), limit * span
-                if length > most:
-                    after = after.copy()
-                    after[part] = velocity[part] + change * (most / length)
-                    mean[part] = 0.5 * (velocity[part] + after[part])
+                length = float(np.linalg.norm(change))
+                if length > limit * span or (length > 0 and self.settings.lag == 0):
+                    change *= min(1.0, limit * span / length)
+                    ramp = min(1.0, length / (limit * span))
+                    after[part] = velocity[part] + change
+                    mean[part] = after[part] - 0.5 * ramp * change
         return after, mean

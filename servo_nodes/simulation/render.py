@@ -33,7 +33,7 @@ from servo_nodes.values import Floats
 
 Field: typing.TypeAlias = npt.NDArray[np.float32]
 
-MOST_SAMPLES = 17
+MOST_SAMPLES = 25
 _FAR_AWAY = 1e6
 _NEAREST = 1e-3
 
@@ -280,10 +280,10 @@ def _box(one: Placed, camera: Camera, spread: float) -> tuple[slice, slice] | No
 
 
 def _samples(placed: Sequence[Placed], camera: Camera, exposure: float) -> int:
-    """Return how many instants make up an exposure: one for each pixel of motion, and one."""
+    """Return how many instants make up an exposure: one for each half pixel of motion, and one."""
     fastest = 0.0
     for one in placed:
         moved = _outline(one, camera, exposure) - _outline(one, camera, 0.0)
         lengths = np.linalg.norm(moved, axis=-1)
         fastest = max(fastest, float(np.max(lengths[np.isfinite(lengths)], initial=0.0)))
-    return min(MOST_SAMPLES, 1 + math.ceil(fastest))
+    return min(MOST_SAMPLES, 1 + math.ceil(2 * fastest))

@@ -126,12 +126,12 @@ class Simulator:
     @property
     def pose(self) -> Floats:
         """Return T_WC (4, 4), the true pose of the camera now."""
-        return self._plant.pose()
+        return self._plant.state()[0]
 
     @property
     def velocity(self) -> Floats:
         """Return the true twist (6,) of the camera now, in its own frame."""
-        return self._plant.velocity()
+        return self._plant.state()[1]
 
     @property
     def target(self) -> Floats:
@@ -187,8 +187,9 @@ class Simulator:
 
     def expose(self) -> Picture:
         """Take a picture now."""
-        settings, camera, pose = self._settings, self._true, self.pose
-        placed = self._placed(pose, self.velocity)
+        settings, camera = self._settings, self._true
+        pose, velocity = self._plant.state()
+        placed = self._placed(pose, velocity)
         shutter = render.Shutter(settings.camera.exposure, settings.camera.readout)
         light = render.picture(placed, camera, shutter,
                                grey=settings.camera.encoding.startswith('mono'))

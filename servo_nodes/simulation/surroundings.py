@@ -21,6 +21,8 @@ _INSTANT = 1e-4
 
 def target_pose(scene: SceneSettings, t: float) -> Floats:
     """Return T_WT (4, 4) at `t`, s: what drift and vibration made of the target's place."""
+    if _is_at_rest(scene):
+        return np.eye(4)
     swing = math.sin(2 * math.pi * scene.vibration_rate * t)
     swung = motion.pose_from_parts(np.eye(3), np.multiply(scene.vibration, swing))
     pose: Floats = swung @ motion.exp(np.multiply(scene.drift, t))
@@ -29,10 +31,14 @@ def target_pose(scene: SceneSettings, t: float) -> Floats:
 
 def target_twist(scene: SceneSettings, t: float) -> Floats:
     """Return the target's twist (6,) at `t`, s, in its own frame."""
-    if not any(scene.drift) and not any(scene.vibration):
+    if _is_at_rest(scene):
         return np.zeros(6)
     before, after = target_pose(scene, t - _INSTANT), target_pose(scene, t + _INSTANT)
     return motion.log(motion.inverse(before) @ after) / (2 * _INSTANT)
+
+
+def _is_at_rest(scene: SceneSettings) -> bool:
+    return not any(scene.drift) and not any(scene.vibration)
 
 
 def brightness(light: LightSettings, t: float) -> float:
