@@ -10,7 +10,8 @@ from setuptools.command.install import install
 PACKAGE = 'servo_nodes'
 
 NODES = ('tracker', 'controller', 'simulator')
-TOOLS = {'servo_demo': 'ros.demo', 'servo_drill': 'ros.drill', 'servo_bench': 'offline.bench'}
+TOOLS = {'servo_demo': 'ros.demo', 'servo_drill': 'ros.drill', 'servo_bench': 'offline.bench',
+         'servo_replay': 'offline.replay'}
 
 # ROS 2 as wheels, for machines without a ROS installation; a ROS machine needs none of them.
 STANDALONE = [

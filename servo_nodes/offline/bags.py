@@ -102,7 +102,8 @@ class Bag:
         opened = [self._stream(index, volume, wanted)
                   for index, volume in enumerate(self.volumes)]
         # A file is opened when its first message is due, so that few are open at a time.
-        heap = [(volume.start, index, -1, None) for index, volume in enumerate(self.volumes)]
+        heap: list[tuple[int, int, int, Message | None]] = [
+            (volume.start, index, -1, None) for index, volume in enumerate(self.volumes)]
         heapq.heapify(heap)
         while heap:
             _, index, number, message = heap[0]

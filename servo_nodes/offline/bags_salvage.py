@@ -1,6 +1,6 @@
 # Copyright 2026 servo_nodes maintainers
 # SPDX-License-Identifier: Apache-2.0
-"""What can still be read of a storage file whose index or end is lost, in the order it was written.
+"""What can still be read of a storage file whose index or end is lost, in the order of writing.
 
 A recorder that dies leaves an MCAP file without its index, or a sqlite3 file shorter than its
 header says. Both hold whole messages up to the cut. Layouts: the MCAP specification, version 0
@@ -142,7 +142,7 @@ def _unpacked(data: bytes, compression: str, whole: bool) -> bytes:
         return zstd_prefix(data, _MOST_CHUNK)
     if not whole:
         raise CutOff(f'a chunk packed with {compression} is incomplete')
-    import lz4.frame
+    import lz4.frame  # type: ignore[import-untyped]
     if compression != 'lz4':
         raise CutOff(f'expected chunks packed with zstd or lz4, got {compression!r}')
     try:
@@ -163,7 +163,7 @@ def zstd_prefix(data: bytes, most: int) -> bytes:
 def zstd_module() -> typing.Any:
     """Return Python's zstd, which came with 3.14, or the same for earlier ones."""
     try:
-        from compression import zstd
+        from compression import zstd  # type: ignore[import-not-found, unused-ignore]
     except ImportError:
         from backports import zstd
     return zstd
