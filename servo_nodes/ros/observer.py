@@ -1,6 +1,6 @@
 # Copyright 2026 servo_nodes maintainers
 # SPDX-License-Identifier: Apache-2.0
-"""Observes the controller from outside: every command with its time of receipt, and every state."""
+"""Observes the controller from outside: every command with its time of receipt, every state."""
 
 from __future__ import annotations
 

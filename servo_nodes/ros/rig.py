@@ -18,13 +18,33 @@ import typing
 from collections.abc import Callable, Mapping, Sequence
 
 import rclpy
+from rcl_interfaces.srv import SetParametersAtomically
 from rclpy.context import Context
 from rclpy.executors import SingleThreadedExecutor
 from rclpy.node import Node
+from rclpy.parameter import Parameter
 
 from servo_nodes.values import SECOND_NS
 
 NAMESPACE = '/servo'
+ROOT = pathlib.Path(__file__).resolve().parents[2]
+
+
+def shipped(name: str) -> pathlib.Path | None:
+    """Return a file of `config/`, from the source tree or from where it was installed."""
+    places = (ROOT, pathlib.Path(sys.prefix) / 'share' / 'servo_nodes')
+    return next((place / 'config' / name for place in places
+                 if (place / 'config' / name).is_file()), None)
+
+
+def transport() -> dict[str, str]:
+    """Return the environment in which images get through and no listener blocks a publisher."""
+    profile = shipped('dds_profile.xml')
+    found = {'RMW_FASTRTPS_PUBLICATION_MODE': 'ASYNCHRONOUS'}
+    if profile is not None:
+        found |= dict.fromkeys(
+            ('FASTDDS_DEFAULT_PROFILES_FILE', 'FASTRTPS_DEFAULT_PROFILES_FILE'), str(profile))
+    return found
 
 
 class Child:
@@ -91,11 +111,10 @@ class Rig:
     """
 
     def __init__(self, domain: int, env: Mapping[str, str] | None = None) -> None:
-        here = str(pathlib.Path(__file__).resolve().parents[2])
-        paths = [here, *filter(None, [os.environ.get('PYTHONPATH')])]
+        paths = [str(ROOT), *filter(None, [os.environ.get('PYTHONPATH')])]
         self._env = {**os.environ, 'ROS_DOMAIN_ID': str(domain), 'PYTHONUNBUFFERED': '1',
                      'ROS_AUTOMATIC_DISCOVERY_RANGE': 'LOCALHOST',
-                     'PYTHONPATH': os.pathsep.join(paths), **(env or {})}
+                     'PYTHONPATH': os.pathsep.join(paths), **transport(), **(env or {})}
         os.environ['ROS_AUTOMATIC_DISCOVERY_RANGE'] = 'LOCALHOST'
         self._folder = tempfile.TemporaryDirectory(prefix='servo_rig_')
         self.folder = pathlib.Path(self._folder.name)
@@ -121,9 +140,9 @@ class Rig:
         rclpy.try_shutdown(context=self._context)
         self._folder.cleanup()
 
-    def start(self, node: str, *, namespace: str = NAMESPACE, remap: Mapping[str, str] | None = None,
-              arguments: Sequence[str] = (), env: Mapping[str, str] | None = None,
-              **parameters: object) -> Child:
+    def start(self, node: str, *, namespace: str = NAMESPACE,
+              remap: Mapping[str, str] | None = None, arguments: Sequence[str] = (),
+              env: Mapping[str, str] | None = None, **parameters: object) -> Child:
         """Start a node; parameters are given with `__` for each dot."""
         given = ['-r', f'__ns:={namespace}']
         for old, new in (remap or {}).items():
@@ -160,6 +179,16 @@ class Rig:
         end = time.monotonic_ns() + round(seconds * SECOND_NS)
         while (left := end - time.monotonic_ns()) > 0:
             self.spin(left / SECOND_NS)
+
+    def set(self, node: str, **parameters: object) -> list[str]:
+        """Set parameters of a node, whole or not at all; return what it refuses and why."""
+        changes = [Parameter(name.replace('__', '.'),
+                             value=list(value) if isinstance(value, tuple) else value)
+                   for name, value in parameters.items()]
+        answer = self.call(SetParametersAtomically, f'{node}/set_parameters_atomically',
+                           SetParametersAtomically.Request(
+                               parameters=[change.to_parameter_msg() for change in changes]))
+        return [] if answer.result.successful else [answer.result.reason]
 
     def call(self, kind: type, name: str, request: typing.Any = None,
              timeout: float = 10.0) -> typing.Any:

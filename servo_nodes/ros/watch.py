@@ -98,8 +98,8 @@ class Watch:
         if loss <= MOST_LOSS:
             return
         said = self._minute.passed(
-            'loss', f'{100 * loss:.0f} % of the images are lost between camera and tracker, at most '
-            f'{100 * MOST_LOSS:.0f} % expected; {REMEDY}')
+            'loss', f'{100 * loss:.0f} % of the images are lost between camera and tracker, at '
+            f'most {100 * MOST_LOSS:.0f} % expected; {REMEDY}')
         if said is not None:
             self._node.get_logger().warning(said)
 
