@@ -18,6 +18,7 @@ from servo_nodes.values import SECOND_NS, Floats, Stamp
 
 MOST_PATHS = 40
 _SILENCE = 6.0
+_BINS = 1000
 _WIDTH_IN, _STRIP_IN, _PANEL_IN = 9.2, 0.62, 1.22
 _LINES: tuple[typing.Any, ...] = ('-', (0, (5, 1.6)), (0, (1.2, 1.6)))
 
@@ -48,7 +49,8 @@ def draw_time(record: Record) -> Drawing | None:
         _strip(axes[0], record)
         for axis, (draw, series) in zip(axes[1:], panels, strict=True):
             _stops(axis, record)
-            draw(axis, record, *_with_gaps(_seconds(record, series.times), series.values))
+            t, values = _thinned(_seconds(record, series.times), series.values)
+            draw(axis, record, *_with_gaps(t, values))
         axes[-1].set_xlabel('time, s')
         axes[-1].set_xlim(0, max(1e-3, (record.end - record.origin) / SECOND_NS))
         figure.align_ylabels(axes)
@@ -118,6 +120,21 @@ def _with_gaps(t: Floats, values: Floats) -> tuple[Floats, Floats]:
     return (np.insert(t, gaps, t[gaps - 1] + 1e-3), np.insert(values, gaps, np.nan, axis=0))
 
 
+def _thinned(t: Floats, values: Floats) -> tuple[Floats, Floats]:
+    """Return at most a few thousand rows that keep every peak: each bin's extremes."""
+    size = -(-len(t) // _BINS)
+    if size < 3:
+        return t, values
+    starts = np.arange(0, len(t) - size + 1, size)
+    bins = values[:len(starts) * size].reshape(len(starts), size, -1)
+    low = np.where(np.isfinite(bins), bins, np.inf).argmin(axis=1)
+    high = np.where(np.isfinite(bins), bins, -np.inf).argmax(axis=1)
+    kept = np.unique(np.concatenate([
+        (starts[:, None] + np.hstack([low, high])).ravel(), starts,
+        np.arange(len(starts) * size, len(t)), [len(t) - 1]]))
+    return t[kept], values[kept]
+
+
 def _logarithmic(axis: typing.Any, columns: Floats) -> None:
     """Use a logarithmic axis where the values span more than a decade."""
     positive = columns[np.isfinite(columns) & (columns > 0)]
@@ -170,12 +187,14 @@ def _error(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
 
 
 def _twist(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    _recorded(axis, record, slice(0, 3), 1000)
     _speeds(axis, t, 1000 * values[:, :3], ('right', 'down', 'forward'))
     _cap(axis, record, 'linear', 1000)
     axis.set_ylabel('linear\nmm/s')
 
 
 def _turn(axis: typing.Any, record: Record, t: Floats, values: Floats) -> None:
+    _recorded(axis, record, slice(3, 6), math.degrees(1))
     _speeds(axis, t, np.degrees(values[:, 3:]), ('about right', 'about down', 'roll'))
     _cap(axis, record, 'angular', math.degrees(1))
     axis.set_ylabel('angular\ndeg/s')
@@ -188,12 +207,22 @@ def _speeds(axis: typing.Any, t: Floats, values: Floats, labels: tuple[str, ...]
     axis.plot(t, np.linalg.norm(values, axis=1), color=palette.INK, label='norm', linewidth=1.6)
 
 
+def _recorded(axis: typing.Any, record: Record, part: slice, scale: float) -> None:
+    """Draw the norm of the other run's twist, wide, so that the nearer one shows on it."""
+    series = record.series.get('recorded')
+    if series is not None:
+        t, values = _thinned(_seconds(record, series.times), series.values[:, part])
+        norm = np.linalg.norm(values, axis=1)[:, None]
+        axis.plot(*_with_gaps(t, scale * norm), color=palette.GOAL, linewidth=4, alpha=0.6,
+                  label='recorded norm')
+
+
 def _cap(axis: typing.Any, record: Record, label: str, scale: float) -> None:
     caps = record.series.get('caps')
     if caps is not None:
         axis.plot(_seconds(record, caps.times), scale * caps.column(label), color=palette.SOFT,
                   linestyle=(0, (2, 2)), linewidth=1, label='cap')
-    _key(axis, 5)
+    _key(axis, 6)
 
 
 def _key(axis: typing.Any, columns: int) -> None:

@@ -23,6 +23,7 @@ from servo_nodes.report.stops import Stop, stops
 from servo_nodes.report.style import STYLE
 from servo_nodes.values import SECOND_NS, Stamp
 
+MOST_STOPS = 40
 CAUTIONS = (
     'This loop is not a safety-rated function. Keep an emergency stop in hand and people out of '
     'reach; make first runs at reduced speed. The driver of the arm must time out stale commands '
@@ -112,7 +113,9 @@ def _stop_table(record: Record, found: list[Stop]) -> str:
         f'<td><b>{_spoken(stop.span.event.reason)}</b><br>{html.escape(stop.span.event.text)}'
         f'{"".join(f"<br>then {_spoken(reason)}" for reason in stop.then)}</td>'
         f'<td>{_milliseconds(stop.reaction)}</td><td>{_milliseconds(stop.braking)}</td>'
-        f'<td>{stop.span.seconds:.2f} s</td></tr>' for stop in found)
+        f'<td>{stop.span.seconds:.2f} s</td></tr>' for stop in found[:MOST_STOPS])
+    if len(found) > MOST_STOPS:
+        rows += f'<tr><td colspan="6">and {len(found) - MOST_STOPS} more</td></tr>'
     return ('<section><h2>Every stop</h2><table class="stops"><tr><th>state</th><th>at</th>'
             '<th>why</th><th>last points heard to exact zero</th><th>decision to exact zero</th>'
             f'<th>lasted</th></tr>{rows}</table></section>')

@@ -11,6 +11,7 @@ name       unit           columns
 ========== ============== ==================================================================
 error      px             error
 twist      m/s, rad/s     vx, vy, vz, wx, wy, wz: as commanded, camera in its own frame
+recorded   m/s, rad/s     the same, of another run or version to compare with
 caps       m/s, rad/s     linear, angular: the caps in force
 points     1              seen, at the time they were heard of
 condition  1              condition

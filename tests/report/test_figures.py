@@ -99,16 +99,16 @@ def test_the_same_record_gives_the_same_bytes(drawings):
     assert [each.data for each in again] == [each.data for each in drawings.values()]
 
 
-def test_a_drawing_too_large_as_svg_becomes_a_png(monkeypatch):
-    monkeypatch.setattr(drawing, 'MOST_SVG_BYTES', 1000)
-    noise = Recorder('noise')
-    noise.declare('error', 'px', 'error')
-    values = np.random.default_rng(3).uniform(1, 9, 8000)
-    for stamp, value in enumerate(values):
-        noise.note('error', stamp * 10 ** 7, value)
-    (only,) = figures.drawings(noise.record(Verdict(None, '')))
-    assert only.media == 'image/png'
-    assert only.data.startswith(b'\x89PNG')
+def test_a_drawing_too_large_as_svg_becomes_a_png():
+    dots = np.random.default_rng(3).uniform(size=(2, 20_000))
+    with drawing.pyplot_style() as make:
+        few, many = make(figsize=(2, 2)), make(figsize=(2, 2))
+        few.subplots().plot(*dots[:, :50])
+        many.subplots().scatter(*dots)
+        assert drawing.saved(few)[0] == 'image/svg+xml'
+        media, data = drawing.saved(many)
+    assert media == 'image/png'
+    assert data.startswith(b'\x89PNG')
 
 
 def test_without_matplotlib_one_sentence_says_what_to_install(monkeypatch):
@@ -117,3 +117,32 @@ def test_without_matplotlib_one_sentence_says_what_to_install(monkeypatch):
             "expected the package matplotlib, got none; install it with pip install "
             "'servo_nodes[report]' or apt install python3-matplotlib")):
         figures.drawings(record_of_a_run())
+
+
+def test_a_long_record_is_thinned_but_keeps_its_peaks():
+    t = np.arange(200_000) / 100
+    values = np.column_stack([np.sin(t), np.zeros_like(t)])
+    values[123_456, 1] = 5.0
+    values[77_777, 0] = np.nan
+    times, thinned = figures._thinned(t, values)
+    assert len(times) < 6000
+    assert (times[0], times[-1]) == (t[0], t[-1])
+    assert thinned[:, 1].max() == 5.0
+    assert times[thinned[:, 1].argmax()] == t[123_456]
+    np.testing.assert_array_equal(thinned[:, 0], np.sin(times))
+    assert np.all(np.diff(times) > 0)
+
+
+def test_a_short_record_is_drawn_as_it_is():
+    t, values = np.arange(900.0), np.ones((900, 3))
+    assert figures._thinned(t, values) == (t, values)
+
+
+def test_the_twist_of_another_version_is_drawn_beside_ours():
+    recorder = Recorder('shadow')
+    for name in ('twist', 'recorded'):
+        recorder.declare(name, 'm/s, rad/s', 'vx', 'vy', 'vz', 'wx', 'wy', 'wz')
+        recorder.note(name, 0, *np.zeros(6))
+        recorder.note(name, 10 ** 9, *np.ones(6))
+    (only,) = figures.drawings(recorder.record(Verdict(None, '')))
+    assert 'recorded norm' in _words(only)

@@ -121,3 +121,13 @@ def test_the_same_record_gives_the_same_page(html):
 def test_the_page_is_written_where_it_should_be(tmp_path):
     page.write(record_of_a_run(), tmp_path / 'report.html')
     assert (tmp_path / 'report.html').read_text().startswith('<!DOCTYPE html>')
+
+
+def test_a_run_of_many_stops_lists_the_first_and_counts_the_rest():
+    recorder = Recorder('shaky')
+    for index in range(page.MOST_STOPS + 3):
+        recorder.turn(Event(2 * index, 'holding', 'overrun'))
+        recorder.turn(Event(2 * index + 1, 'servoing'))
+    text = page.page(recorder.record(Verdict(None, '')), [])
+    assert text.count('<td class="chip">') == page.MOST_STOPS
+    assert 'and 3 more' in text
