@@ -64,6 +64,7 @@ class Controller:
         self._wanted: Numbers = REST
         self._ratio = 1.0
         self._ticked: Stamp | None = None
+        self._view: View | None = None
         self._solution: Solution | None = None
         self._error: Exception | None = None
 
@@ -214,7 +215,8 @@ class Controller:
                 self._begin(now)
             self._solve(now)
             if self._solution is not None and self._state in MOVING:
-                self._progress.add(self._solution, self._wanted, now, self._settings)
+                self._progress.add(self._solution, self._wanted, self._view, now,
+                                   self._settings)
         situation = self._situation(now)
         self._judge(situation)
         self._move(situation, duration)
@@ -225,7 +227,7 @@ class Controller:
         fresh = False
         for view in self._intake.judged(now):
             self._servo.observe(view)
-            fresh = True
+            self._view, fresh = view, True
         if fresh and self._state not in ENGAGED:
             self._solve(now)
 
@@ -290,7 +292,7 @@ class Controller:
     def _forget(self) -> None:
         self._intake.forget()
         self._servo.reset()
-        self._ticked = self._solution = None
+        self._ticked = self._view = self._solution = None
         self._wanted = REST
 
     def _answer(self, now: Stamp, figures: Mapping[str, float]) -> Command:

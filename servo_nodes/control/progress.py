@@ -7,13 +7,16 @@ from __future__ import annotations
 import math
 import typing
 
+from servo_nodes.control.home import motion_left
 from servo_nodes.control.servo import Solution
 from servo_nodes.control.settings import ControllerSettings, SettleSettings, WatchdogSettings
 from servo_nodes.control.travel import Leash
 from servo_nodes.control.watch import age
-from servo_nodes.values import Stamp
+from servo_nodes.values import Stamp, View
 
 PARTS = 4
+CLOSE = 5.0
+FAR = [1.0] * 6
 LEAST_STEP = 1.05
 NOISE_PX = 2.0
 
@@ -96,23 +99,27 @@ class Settling:
 
         Parameters
         ----------
-        motion : 6 numbers, m and rad, the way that the law still asks for: its twist over its gain
+        motion : 6 numbers or several times 6, m and rad, ways that are left to go, of which every
+            one must be small
         error_px : float
         now : int, ns
         settings : SettleSettings
         linear_noise, angular_noise : float, m and rad, how surely the view tells the pose; nobody
             can be asked to stand nearer than that
         """
-        sample = [*motion, error_px]
+        sample = [error_px, *motion]
         if self._mean and now >= self._last:
             share = -math.expm1(-age(self._last, now) / max(settings.smoothing, 1e-9))
             sample = [old + share * (new - old)
                       for old, new in zip(self._mean, sample, strict=True)]
         self._mean, self._last = sample, now
         factor = settings.hysteresis if self.is_home else 1.0
-        if not (math.hypot(*sample[:3]) <= factor * max(settings.linear, linear_noise)
-                and math.hypot(*sample[3:6]) <= factor * max(settings.angular, angular_noise)
-                and sample[6] <= factor * settings.error_px):
+        linear = factor * max(settings.linear, linear_noise)
+        angular = factor * max(settings.angular, angular_noise)
+        if not (sample[0] <= factor * settings.error_px and all(
+                math.hypot(*sample[k:k + 3]) <= linear
+                and math.hypot(*sample[k + 3:k + 6]) <= angular
+                for k in range(1, len(sample), 6))):
             self._within, self.is_home = None, False
             return
         if self._within is None:
@@ -126,6 +133,8 @@ class Progress:
     def __init__(self) -> None:
         self.growth, self.stall, self.settling = Growth(), Stall(), Settling()
         self.leash = Leash()
+        self._seen: View | None = None
+        self._left: list[float] = FAR
 
     def begin(self) -> None:
         """Judge anew from here, motion starts from rest; the leash stays tied."""
@@ -138,14 +147,27 @@ class Progress:
         self.begin()
         self.leash.restart()
 
-    def add(self, solution: Solution, twist: typing.Sequence[float], now: Stamp,
-            settings: ControllerSettings) -> None:
-        """Take what a moving loop knows at `now`; `twist` is the solution's, as 6 numbers."""
-        watchdog, settle = settings.watchdog, settings.settle
-        self.growth.add(solution.error_px, now, watchdog.diverging_window)
-        slack = settle.hysteresis if self.settling.is_home else 1.0
-        self.stall.add(solution.error_px, now, watchdog, slack * settle.error_px)
+    def add(self, solution: Solution, twist: typing.Sequence[float], view: View | None,
+            now: Stamp, settings: ControllerSettings) -> None:
+        """Take what a moving loop knows at `now`.
+
+        Parameters
+        ----------
+        solution : Solution
+        twist : 6 numbers, the solution's
+        view : View, the newest good one
+        now : int, ns
+        settings : ControllerSettings
+        """
+        watchdog, settle, error_px = settings.watchdog, settings.settle, solution.error_px
+        tolerance_px = settle.error_px * (settle.hysteresis if self.settling.is_home else 1.0)
+        self.growth.add(error_px, now, watchdog.diverging_window)
+        self.stall.add(error_px, now, watchdog, tolerance_px)
+        if view is not None and view is not self._seen:
+            near = error_px <= CLOSE * settle.error_px
+            self._seen, self._left = view, motion_left(view, settings) if near else FAR
+        asked = [part / solution.gain for part in twist]
         scatter = [settle.noise_px * part for part in solution.scatter.tolist()]
-        self.settling.add([part / solution.gain for part in twist], solution.error_px, now, settle,
+        self.settling.add([*asked, *self._left], error_px, now, settle,
                           linear_noise=math.hypot(*scatter[:3]),
                           angular_noise=math.hypot(*scatter[3:]))

@@ -143,13 +143,19 @@ def test_the_ratio_says_how_much_of_the_law_the_caps_let_through():
 
 
 def test_small_errors_for_a_while_are_settled_and_the_loop_goes_on_regulating():
-    loop = Loop(Asking((1e-4, 0, 0, 0, 0, 0), error_px=0.3)).engaged(80)
+    loop = Loop().at_home().engaged(80)
     assert loop.controller.state is State.SETTLED and speed(loop.commands[-1])[0] > 0
     first = next(c for c in loop.commands if c.state is State.SETTLED)
     assert first.decided - loop.servo.began[0] == 500 * MS
     loop.servo.twist, loop.servo.error_px = FAST, 40.0
     assert loop.tick(3).state is State.SERVOING
     assert speed(loop.tick(30))[0] == pytest.approx(0.1)
+
+
+def test_a_law_that_asks_for_nothing_is_not_believed_to_be_home():
+    loop = Loop().at_home()
+    loop.shift = (5e-3, 0.0)
+    assert loop.engaged(200).controller.state is State.SERVOING
 
 
 def test_points_at_the_border_slow_the_loop_down_and_say_so():
@@ -485,7 +491,7 @@ def test_an_error_within_tolerance_never_stalls():
 
 
 def test_a_settled_loop_stalls_only_beyond_the_hysteresis():
-    loop = Loop(Asking((0,) * 6, error_px=0.3)).engaged(80)
+    loop = Loop().at_home().engaged(80)
     assert loop.controller.state is State.SETTLED
     loop.servo.error_px = 2.5
     assert loop.tick(700).state is State.SETTLED
@@ -514,7 +520,7 @@ def test_the_leash_measures_turns_too():
     assert loop.commands[-1].reason is Reason.TRAVEL_LIMIT
 
 
-# Clocks, settings ---------------------------------------------------------------------------------
+# Clocks, settings -------------------------------------------------------------------------------
 
 def test_a_clock_that_jumps_stands_by_at_rest_and_needs_engaging_again():
     loop = Loop().engaged(40)

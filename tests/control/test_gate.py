@@ -40,8 +40,8 @@ ROWS = [
     (Reason.CAMERA_MISMATCH, FAULT,
      [{'camera_changed': 'camera_info: expected a, got b'}, bad(Reason.CAMERA_MISMATCH)],
      [{'camera_changed': ''}]),
-    (Reason.NO_CAMERA, FAULT, [{'calibrated': False},
-                               {'calibrated': False, 'camera_fault': 'k: expected 9 numbers, got 8'}],
+    (Reason.NO_CAMERA, FAULT,
+     [{'calibrated': False}, {'calibrated': False, 'camera_fault': 'k: expected 9, got 8'}],
      [{'calibrated': True}]),
     (Reason.NO_GOAL, FAULT, [bad(Reason.NO_GOAL)], [{}]),
     (Reason.SECOND_PUBLISHER, FAULT, [{'publishers': 2}],
@@ -163,9 +163,9 @@ def test_no_good_view_for_the_watchdog_s_time_always_stops_whatever_else_is_hear
 NUMBER = st.floats(allow_nan=True, allow_infinity=True)
 
 
-@given(st.fixed_dictionaries({name: NUMBER for name in (
+@given(st.fixed_dictionaries(dict.fromkeys((
     'travelled', 'turned', 'grown', 'stalled', 'heard_age', 'good_age', 'image_age', 'condition',
-    'smallest', 'crowded')}))
+    'smallest', 'crowded'), NUMBER)))
 def test_whatever_the_numbers_no_verdict_means_that_all_are_on_the_allowed_side(numbers):
     moment = situation(**numbers)
     if verdict(moment) is None:
@@ -240,7 +240,8 @@ def test_the_sentences_carry_the_numbers_of_the_moment():
         'no heartbeat so far, at most 0.5 s allowed')
     assert said(exception='KeyError: 3').startswith(
         'an error of the program, expected none, got KeyError: 3')
-    assert said(calibrated=False).startswith('camera_info: expected a calibration, got none so far')
+    assert said(calibrated=False).startswith(
+        'camera_info: expected a calibration, got none so far')
     assert said(calibrated=False, camera_fault='camera_info: fx = 0').startswith(
         'camera_info: fx = 0; calibrate')
     assert said(**bad(Reason.TOO_FEW_POINTS)).startswith(TEXT + '; bring')

@@ -21,6 +21,7 @@ START = 1_000 * MS
 CAMERA = Camera(640, 480, 600.0, 600.0, 319.5, 239.5)
 OTHER_CAMERA = Camera(640, 480, 500.0, 500.0, 319.5, 239.5)
 DISTANCE = 0.42
+AWAY = (0.03, -0.02)
 
 
 def settings(**values):
@@ -35,7 +36,7 @@ def situation(**values):
     return Situation(known.watchdog, known.heartbeat, known.output)._replace(**values)
 
 
-def view(stamp, *, count=12, shift=(0.03, -0.02), seed=1, noise=1e-4, frame_id=None, **changes):
+def view(stamp, *, count=12, shift=AWAY, seed=1, noise=1e-5, frame_id=None, **changes):
     """Return a view whose points are off by `shift`, with noise that differs for each stamp."""
     rng = np.random.default_rng([seed, abs(stamp)])
     goal = np.random.default_rng(seed).uniform(-0.3, 0.3, (count, 2))
@@ -93,6 +94,7 @@ class Loop:
         self.now = START
         self.period = period
         self.count = 0
+        self.shift = AWAY
         self.commands = []
 
     def tick(self, ticks=1, *, feed=True, latency=20 * MS, **changes):
@@ -100,10 +102,16 @@ class Loop:
         for _ in range(ticks):
             self.now += TICK
             if feed and self.count % self.period == 0:
-                self.controller.observe(view(self.now - latency, **changes), self.now)
+                seen = view(self.now - latency, **{'shift': self.shift, **changes})
+                self.controller.observe(seen, self.now)
             self.count += 1
             self.commands.append(self.controller.command(self.now))
         return self.commands[-1]
+
+    def at_home(self):
+        """Show points that are where the goal has them, and ask for next to nothing."""
+        self.shift, self.servo.twist, self.servo.error_px = (0.0, 0.0), (1e-5, 0, 0, 0, 0, 0), 0.3
+        return self
 
     def engaged(self, ticks=30):
         """Engage and let the loop run for a while."""
