@@ -188,7 +188,8 @@ def rotation_from_quaternion(xyzw: npt.ArrayLike) -> Floats:
     quaternion = np.asarray(xyzw, dtype=np.float64)
     length = float(np.linalg.norm(quaternion))
     if quaternion.shape != (4,) or not 1e-6 <= length < np.inf:
-        raise ValueError(f'quaternion: expected 4 finite numbers of unit length, got {xyzw!r}')
+        raise ValueError('quaternion: expected finite numbers of unit length, 4 of them, '
+                         f'got {xyzw!r}')
     x, y, z, w = quaternion
     return typing.cast(Floats, _transforms3d().quat2mat(np.array([w, x, y, z]) / length))
 

@@ -78,14 +78,15 @@ def range_of(definition: Definition) -> str:
     """Return what is allowed, in a few characters."""
     if definition.choices:
         return ', '.join(f'`{choice}`' for choice in definition.choices)
-    low, high = definition.low, definition.high
+    low, high = (limit if limit is None or definition.kind is int else f'{limit:g}'
+                 for limit in (definition.low, definition.high))
     words = ''
     if low is not None and high is not None:
-        words = f'{low:g} … {high:g}'
+        words = f'{low} … {high}'
     elif low is not None:
-        words = f'≥ {low:g}'
+        words = f'≥ {low}'
     elif high is not None:
-        words = f'≤ {high:g}'
+        words = f'≤ {high}'
     if definition.lengths:
         count = ' or '.join(map(str, definition.lengths)) + ' numbers'
         words = f'{count}, {words}' if words else count

@@ -80,7 +80,7 @@ def test_quaternions_are_x_y_z_w_with_w_not_negative(vector):
 @pytest.mark.parametrize('numbers', [(0, 0, 0, 0), (np.nan, 0, 0, 1), (np.inf, 0, 0, 1),
                                      (0, 0, 1), (0, 0, 0, 0, 1)])
 def test_what_is_no_quaternion_is_refused(numbers):
-    with pytest.raises(ValueError, match='quaternion: expected 4 finite numbers of unit length'):
+    with pytest.raises(ValueError, match='quaternion: expected finite numbers of unit length, 4'):
         motion.rotation_from_quaternion(numbers)
 
 
