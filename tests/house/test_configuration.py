@@ -159,6 +159,9 @@ def test_every_remapped_name_is_one_that_the_node_opens(path):
         if node.attrib['pkg'] == 'servo_nodes':
             for item in node.iter('remap'):
                 assert item.attrib['from'] in names_of(node.attrib['name']), item.attrib['from']
+    opened = set().union(*map(names_of, NODES))
+    for item in root_of(path).iter('set_remap'):
+        assert item.attrib['from'] in opened, item.attrib['from']
 
 
 @pytest.mark.parametrize('path', LAUNCH_FILES)

@@ -64,7 +64,7 @@ def test_every_reason_is_explained():
 
 def test_the_executables_are_those_of_the_package():
     from test_package import entry_points
-    listed = set(re.findall(r'`(\w+)(?: AREA)?`', ''.join(
+    listed = set(re.findall(r'`(\w+)(?: [A-Z]+)?`', ''.join(
         row.split('|')[1] for row in section('Tools').splitlines() if row.startswith('| `'))))
     assert listed == set(entry_points())
 
