@@ -16,6 +16,7 @@ import tempfile
 import time
 import typing
 from collections.abc import Callable, Mapping, Sequence
+from importlib import metadata
 
 import rclpy
 from rcl_interfaces.srv import SetParametersAtomically
@@ -27,6 +28,8 @@ from rclpy.parameter import Parameter
 from servo_nodes.values import SECOND_NS
 
 NAMESPACE = '/servo'
+# The rclpy of Kilted, whose middleware warns of the variable's old name.
+RENAMED_IN = 9
 ROOT = pathlib.Path(__file__).resolve().parents[2]
 
 
@@ -42,8 +45,9 @@ def transport() -> dict[str, str]:
     profile = shipped('dds_profile.xml')
     found = {'RMW_FASTRTPS_PUBLICATION_MODE': 'ASYNCHRONOUS'}
     if profile is not None:
-        found |= dict.fromkeys(
-            ('FASTDDS_DEFAULT_PROFILES_FILE', 'FASTRTPS_DEFAULT_PROFILES_FILE'), str(profile))
+        found['FASTDDS_DEFAULT_PROFILES_FILE'] = str(profile)
+        if int(metadata.version('rclpy').split('.')[0]) < RENAMED_IN:
+            found['FASTRTPS_DEFAULT_PROFILES_FILE'] = str(profile)
     return found
 
 

@@ -11,25 +11,23 @@ import typing
 from collections.abc import Mapping
 
 import numpy as np
-from geometry_msgs.msg import PoseStamped, TwistStamped
+from geometry_msgs.msg import TwistStamped
 from rosgraph_msgs.msg import Clock as ClockMessage
-from sensor_msgs.msg import CameraInfo
-from sensor_msgs.msg import Image as ImageMessage
 from std_srvs.srv import Trigger
 
-from servo_nodes import motion, wire
+from servo_nodes import wire
 from servo_nodes.ros.diagnostics import OK, Diagnostics, versions
 from servo_nodes.ros.meters import Durations
 from servo_nodes.ros.options import SimulatorNodeSettings
 from servo_nodes.ros.pacer import Pacer
+from servo_nodes.ros.pictures import Pictures
 from servo_nodes.ros.shell import Shell, run
 from servo_nodes.simulation.simulator import Picture, Simulator, SimulatorSettings
-from servo_nodes.values import Image, Stamp
+from servo_nodes.values import Stamp
 
 CLOCK_RATE = 200.0
-CLOCK_START = 1_000_000_000
-OUTPUTS = {'image': ImageMessage, 'camera_info': CameraInfo, 'depth': ImageMessage,
-           'true_pose': PoseStamped}
+LINE_RATE = 100.0
+START = 1_000_000_000
 
 
 class SimulatorNode(Shell):
@@ -44,9 +42,9 @@ class SimulatorNode(Shell):
         shell, doors = self.parameters[SimulatorNodeSettings], self.doors
         self.simulator = Simulator(self.parameters[SimulatorSettings],
                                    np.random.default_rng(shell.seed))
-        self._out = {name: doors.publish(kind, name) for name, kind in OUTPUTS.items()}
-        if shell.clock.lead:
-            self._out['/clock'] = doors.publish(ClockMessage, '/clock')
+        self.simulator.restart(now=START)
+        self._pictures = Pictures(self)
+        self._clock_out = doors.publish(ClockMessage, '/clock') if shell.clock.lead else None
         doors.listen(TwistStamped, 'camera_twist', self._take_twist)
         doors.serve(Trigger, '~/restart', self._restart)
         self._diagnostics, self._work = Diagnostics(self, 'simulation'), Durations('exposure')
@@ -55,8 +53,10 @@ class SimulatorNode(Shell):
     def activate(self) -> str:
         """Let time run."""
         self._origin = time.monotonic_ns(), self.simulator.now
-        self._pacers = [Pacer(self._rate(), self._expose, self.fail, 'camera')]
-        if '/clock' in self._out:
+        rate = self.simulator.settings.camera.rate * self._speed()
+        self._pacers = [Pacer(rate, self._expose, self.fail, 'camera'),
+                        Pacer(LINE_RATE, self._deliver, self.fail, 'line')]
+        if self._clock_out is not None:
             self._pacers.append(Pacer(CLOCK_RATE, self._tell_time, self.fail, 'clock'))
         for pacer in self._pacers:
             pacer.start()
@@ -89,9 +89,6 @@ class SimulatorNode(Shell):
         clock = self.parameters[SimulatorNodeSettings].clock
         return clock.speed if clock.lead else 1.0
 
-    def _rate(self) -> float:
-        return self.simulator.settings.camera.rate * self._speed()
-
     def _time(self, steady: Stamp) -> Stamp:
         """Return the simulated time, ns, at a steady one."""
         began, simulated = self._origin
@@ -100,38 +97,30 @@ class SimulatorNode(Shell):
     def _expose(self, now: Stamp, late: Stamp) -> None:
         with self._lock:
             self.simulator.advance_to(max(self._time(now), self.simulator.now))
-            picture = self.simulator.expose()
-        if '/clock' in self._out:
-            stamp = CLOCK_START + picture.stamp
-        else:
-            stamp = self.now_ns() - (time.monotonic_ns() - now)
-        self._publish(picture, stamp)
+            self.simulator.transmit(self.simulator.expose())
+            self._publish(self.simulator.arrivals())
         self._work.add(time.monotonic_ns() - now)
 
-    def _publish(self, picture: Picture, stamp: Stamp) -> None:
-        out, frame = self._out, picture.calibration.frame_id
-        info = CameraInfo()
-        wire.fill_camera_info(info, picture.calibration, stamp)
-        out['camera_info'].publish(info)
-        message = ImageMessage()
-        wire.fill_image(message, Image(picture.image, picture.encoding, stamp, frame))
-        out['image'].publish(message)
-        wanted = self.parameters[SimulatorNodeSettings].publish_depth
-        if wanted and out['depth'].get_subscription_count():
-            message = ImageMessage()
-            wire.fill_image(message, Image(picture.depth, '32FC1', stamp, frame))
-            out['depth'].publish(message)
-        pose = PoseStamped()
-        wire.fill_time(pose.header.stamp, stamp)
-        pose.header.frame_id = self.parameters[SimulatorNodeSettings].target_frame
-        wire.fill_pose(pose.pose, picture.pose[:3, 3],
-                       motion.quaternion_from_rotation(picture.pose[:3, :3]))
-        out['true_pose'].publish(pose)
+    def _deliver(self, now: Stamp, late: Stamp) -> None:
+        """Publish what faults have delayed."""
+        due = self.simulator.next_arrival
+        if due is not None and due <= self._time(now):
+            with self._lock:
+                self.simulator.advance_to(max(self._time(now), self.simulator.now))
+                self._publish(self.simulator.arrivals())
+
+    def _publish(self, pictures: list[Picture]) -> None:
+        ahead = 0
+        if self._clock_out is None:
+            ahead = self.now_ns() - self._time(time.monotonic_ns())
+        for picture in pictures:
+            # A stamp of zero is a fault that must stay one.
+            self._pictures.show(picture, picture.stamp + ahead if picture.stamp else 0)
 
     def _tell_time(self, now: Stamp, late: Stamp) -> None:
         message = ClockMessage()
-        wire.fill_time(message.clock, CLOCK_START + self._time(now))
-        self._out['/clock'].publish(message)
+        wire.fill_time(message.clock, self._time(now))
+        self._clock_out.publish(message)
 
     def _take_twist(self, message: TwistStamped) -> None:
         if not self.active:

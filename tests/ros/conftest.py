@@ -4,6 +4,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import fcntl
 import pathlib
 import tempfile
@@ -15,9 +16,9 @@ pytest.importorskip('rclpy', reason='ROS 2 is not installed here')
 DOMAINS = range(60, 80)
 
 
-@pytest.fixture(scope='session')
-def domain():
-    """Return a ROS domain that no other run on this machine uses."""
+@contextlib.contextmanager
+def free_domain():
+    """Yield a ROS domain that nobody else on this machine uses for now."""
     for number in DOMAINS:
         path = pathlib.Path(tempfile.gettempdir()) / f'servo_nodes_domain_{number}.lock'
         with path.open('w') as file:
@@ -31,16 +32,16 @@ def domain():
 
 
 @pytest.fixture
-def rig(domain):
+def rig():
     """Return a rig whose processes end with the test."""
     from servo_nodes.ros.rig import Rig
-    with Rig(domain) as made:
+    with free_domain() as domain, Rig(domain) as made:
         yield made
 
 
 @pytest.fixture(scope='module')
-def module_rig(domain):
+def module_rig():
     """Return a rig whose processes end with the module."""
     from servo_nodes.ros.rig import Rig
-    with Rig(domain) as made:
+    with free_domain() as domain, Rig(domain) as made:
         yield made

@@ -71,13 +71,24 @@ def test_nodes_meet_only_on_this_machine_whatever_the_environment_says():
     assert '10.0.0.7' not in ' '.join(kept.values())
 
 
-def test_the_shipped_profile_is_in_the_environment_under_both_names():
-    profile = demo_processes.dds_profile()
-    if profile is None:
-        pytest.skip('config/dds_profile.xml is not there')
-    kept = isolated({}, 55)
-    assert kept['FASTDDS_DEFAULT_PROFILES_FILE'] == str(profile)
-    assert kept['FASTRTPS_DEFAULT_PROFILES_FILE'] == str(profile)
+def _no_package(name):
+    raise demo_processes.metadata.PackageNotFoundError(name)
+
+
+@pytest.mark.parametrize(('distro', 'name'), [
+    ('jazzy', 'FASTRTPS_DEFAULT_PROFILES_FILE'), ('lyrical', 'FASTDDS_DEFAULT_PROFILES_FILE'),
+    (None, 'FASTDDS_DEFAULT_PROFILES_FILE')])
+def test_the_shipped_profile_is_given_under_the_name_that_is_read(distro, name, monkeypatch):
+    monkeypatch.setattr(demo_processes.metadata, 'version', _no_package)
+    kept = isolated({} if distro is None else {'ROS_DISTRO': distro}, 55)
+    assert kept[name] == str(ROOT / 'config' / 'dds_profile.xml')
+    assert len([each for each in kept if each.endswith('_PROFILES_FILE')]) == 1
+
+
+def test_the_older_wheels_read_the_older_name(monkeypatch):
+    monkeypatch.setattr(demo_processes.metadata, 'version',
+                        lambda name: '7.1' if name == 'ros-jazzy-rclpy' else _no_package(name))
+    assert 'FASTRTPS_DEFAULT_PROFILES_FILE' in isolated({}, 55)
 
 
 def test_a_domain_in_use_on_this_machine_is_not_taken(monkeypatch):
