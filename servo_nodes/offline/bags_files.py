@@ -63,12 +63,22 @@ class Volume:
         Raises
         ------
         CutOff
-            Where the file cannot be read any further; what is readable was yielded.
+            Where the file cannot be read any further, or at its end when single messages did not
+            unpack; what is readable was yielded.
         """
+        spoiled, first = 0, ''
         with self._plain() as path:
             for found in self._salvaged(path) if self._cut else self._read(path, topics):
-                if topics is None or found.topic in topics:
-                    yield found._replace(data=_unpacked(found.data))
+                if topics is not None and found.topic not in topics:
+                    continue
+                try:
+                    whole = found._replace(data=_unpacked(found.data))
+                except CutOff as error:
+                    spoiled, first = spoiled + 1, first or str(error)
+                    continue
+                yield whole
+        if spoiled:
+            raise CutOff(f'{spoiled} messages do not unpack; the first: {first}')
 
     def _survey(self) -> None:
         try:

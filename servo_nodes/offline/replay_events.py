@@ -9,8 +9,10 @@ that they are read off the commands, which are published only while the loop is 
 
 from __future__ import annotations
 
+import collections
+import functools
 import typing
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 
 from servo_nodes import wire
@@ -57,12 +59,17 @@ class Recorded:
         self.dropped[part] = count + 1, first
 
 
+@functools.cache
+def _standard_types() -> typing.Any:
+    from rosbags.typesys import Stores, get_typestore
+    return get_typestore(Stores.LATEST)
+
+
 class Decoder:
     """Bytes of a recorded message -> the message, by the standard definitions."""
 
     def __init__(self) -> None:
-        from rosbags.typesys import Stores, get_typestore
-        self._store = get_typestore(Stores.LATEST)
+        self._store = _standard_types()
 
     def __call__(self, message: Message) -> typing.Any:
         """Return the message; ValueError with one sentence when its bytes are not of its type."""
@@ -127,6 +134,25 @@ def recorded_names(bag: Bag, parts: Mapping[str, str], notes: list[str]) -> Name
     return names
 
 
+def led(events: Iterable[Event], period: Stamp) -> Iterator[Event]:
+    """Yield the events, and one period, ns, before each ENGAGE a tick.
+
+    The recorded controller ticked then, too, but sends nothing before it is engaged; its first
+    step depends on how long ago that tick was.
+    """
+    held: collections.deque[Event] = collections.deque()
+    for event in events:
+        if event.kind is Kind.ENGAGE and event.value:
+            before = event.time - period
+            while held and held[0].time <= before:
+                yield held.popleft()
+            yield Event(before, Kind.TICK)
+        held.append(event)
+        while held[0].time < event.time - period:
+            yield held.popleft()
+    yield from held
+
+
 class Script:
     """The events of a recording, in order.
 
@@ -159,6 +185,11 @@ class Script:
 
     def events(self) -> Iterator[Event]:
         """Yield the events; the first says that somebody listens, which no message tells."""
+        if self._guessed:
+            return self._read()
+        return led(self._read(), round(SECOND_NS / self._choice.controller.rate))
+
+    def _read(self) -> Iterator[Event]:
         first = True
         for message in self._bag.messages(self._parts):
             if first:
