@@ -15,7 +15,7 @@ from servo_nodes.report import palette
 from servo_nodes.report.record import Picture
 
 MOST_SVG_BYTES = 160_000
-_STYLE: dict[str, typing.Any] = {
+_STYLE: typing.Any = {
     'svg.fonttype': 'none', 'svg.hashsalt': 'servo_nodes', 'path.simplify_threshold': 0.25,
     'font.family': ['DejaVu Sans', 'sans-serif'], 'font.size': 8.5,
     'figure.facecolor': palette.PAPER, 'axes.facecolor': 'none',

@@ -165,7 +165,7 @@ def _strip(axis: typing.Any, record: Record) -> None:
     for stop in stops(record):
         start = _second(record, stop.span.start)
         label = f'{stop.span.event.reason.replace("_", " ")} at {start:.2f} s'
-        wide = whole / SECOND_NS * 0.0092 * len(label)
+        wide = whole / SECOND_NS * 0.007 * len(label)
         axis.plot([start, start], [1, 1.3], color=palette.INK, linewidth=0.8)
         left = min(start, whole / SECOND_NS - wide)
         if left >= free:

@@ -59,8 +59,8 @@ def overlay(image: Picture, *, points_px: npt.ArrayLike | None = None,
             image.ndim == 3 and image.shape[2] != 3):
         raise ValueError('image: expected uint8 of shape (h, w) or (h, w, 3), '
                          f'got {image.dtype} of shape {image.shape}')
-    canvas: Picture = (cv2.cvtColor(image, cv2.COLOR_GRAY2BGR) if image.ndim == 2
-                       else image.copy())
+    canvas = (np.asarray(cv2.cvtColor(image, cv2.COLOR_GRAY2BGR), np.uint8) if image.ndim == 2
+              else image.copy())
     unit = max(0.5, min(canvas.shape[0] / 480, canvas.shape[1] / 640))
     if homography is not None:
         _draw_corners(canvas, np.asarray(homography, np.float64), unit)
@@ -105,12 +105,13 @@ def _fixed(pixels: npt.NDArray[np.float64]) -> npt.NDArray[np.int32]:
 def _draw_points(canvas: Picture, now: npt.NDArray[np.float64], goal: npt.NDArray[np.float64],
                  unit: float) -> None:
     thin, wide = max(1, round(1.3 * unit)), max(3, round(3.4 * unit))
-    lines = _lines(now, goal, unit) if len(now) == len(goal) else []
+    paired = len(now) == len(goal)
+    lines = list(_lines(now, goal, unit)) if paired else []
     diamonds = _fixed(goal[:, None, :] + _DIAMOND * unit)
     dots, radius = _fixed(now), _DOT * unit
     for rim in (True, False):
         width = wide if rim else thin
-        cv2.polylines(canvas, list(lines), False, _RIM if rim else _PAPER, width, _SMOOTH, _SHIFT)
+        cv2.polylines(canvas, lines, False, _RIM if rim else _PAPER, width, _SMOOTH, _SHIFT)
         cv2.polylines(canvas, list(diamonds), True,
                       _RIM if rim else palette.bgr(palette.GOAL), width, _SMOOTH, _SHIFT)
         size = round((radius + (1.2 * unit if rim else 0)) * (1 << _SHIFT))

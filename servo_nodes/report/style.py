@@ -35,7 +35,7 @@ img {{ display: block; width: 100%; height: auto; }}
 .around .row {{ margin-top: 0; }}
 .tiles {{ display: grid; grid-template-columns: repeat(auto-fit, minmax(118px, 1fr));
   gap: 10px 18px; margin: 18px 0 4px; }}
-.tiles b {{ display: block; font-size: 22px; line-height: 1.25; }}
+.tiles b {{ display: block; font-size: 20px; line-height: 1.3; white-space: nowrap; }}
 .tiles span {{ display: block; color: {palette.SOFT}; font-size: 13px; line-height: 1.35; }}
 table {{ border-collapse: collapse; width: 100%; font-size: 14px; }}
 th {{ text-align: left; font-weight: 600; color: {palette.SOFT}; font-size: 13px; }}

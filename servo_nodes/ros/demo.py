@@ -36,6 +36,7 @@ GOOD, BAD, UNUSABLE = 0, 1, 2
 STOPPED = 130
 LINE_PERIOD_S, SPARSE_PERIOD_S = 0.1, 1.0
 _NEEDED = {
+    'rosbags': "pip install 'servo_nodes[bags]'",
     'matplotlib': "pip install 'servo_nodes[report]', or apt install python3-matplotlib",
     'rclpy': "source a ROS 2 installation, or pip install 'servo_nodes[standalone]'"}
 _PACKAGES = ('numpy', 'opencv-python-headless', 'opencv-python', 'scipy',
@@ -87,7 +88,8 @@ def run(argv: Sequence[str] | None = None) -> int:
     words = Words(sys.stderr if options.json else sys.stdout)
     try:
         for package, remedy in _NEEDED.items():
-            _require(package, remedy)
+            if package != 'rosbags' or options.bag is not None:
+                _require(package, remedy)
         return _demonstrate(options, words)
     except (Trouble, MissingExtra) as error:
         print(f'servo_demo: {error}', file=sys.stderr)
@@ -121,6 +123,11 @@ def _options(argv: Sequence[str] | None) -> argparse.Namespace:
                         help='seconds it may take to come home (default: %(default)g)')
     parser.add_argument('--domain', type=int, choices=range(102), metavar='0..101',
                         help='ROS domain (default: one that is free on this machine)')
+    parser.add_argument('--fault', action='append', choices=('occlusion', 'stall', 'freeze'),
+                        default=[], help='watch it stop: cover the lens, let the camera fall '
+                        'silent, or repeat its last image, for 1 s; may be given several times')
+    parser.add_argument('--bag', type=pathlib.Path, metavar='FOLDER', help='record topics and '
+                        'parameters there as a rosbag2 recording (needs the package rosbags)')
     parser.add_argument('--json', action='store_true', help='one JSON object on standard output, '
                         'words on standard error')
     options = parser.parse_args(argv)
@@ -158,19 +165,25 @@ def _demonstrate(options: argparse.Namespace, words: Words) -> int:
 def _play(options: argparse.Namespace, words: Words, start: Start, recorder: record.Recorder, *,
           namespace: str, environment: dict[str, str]) -> Outcome:
     from servo_nodes.ros.demo_run import HOME_DISTANCE_M, Run
-    from servo_nodes.ros.demo_watch import Watch
+    from servo_nodes.ros.demo_watch import QOS, Watch
     with _own_signals(), Children(namespace=namespace, environment=environment,
                                   logs=options.out / 'logs') as children:
         children.start('simulator', {'seed': options.seed, 'scene.seed': options.seed})
         children.start('tracker', {'teach.distance': HOME_DISTANCE_M,
                                    'goal.folder': str((options.out / 'goal').resolve())})
         children.start('controller', {})
-        watch = Watch(namespace, recorder, children.check)
+        watch, bag = Watch(namespace, recorder, children.check), None
         try:
-            outcome = Run(watch, start, timeout=options.timeout, say=words.say,
-                          show=words.show).play()
+            if options.bag is not None:
+                from servo_nodes.ros.demo_bag import Bag
+                bag = Bag(options.bag)
+                bag.listen(watch.node, QOS)
+            outcome = Run(watch, start, faults=options.fault, timeout=options.timeout, bag=bag,
+                          say=words.say, show=words.show).play()
         finally:
             watch.close()
+            if bag is not None:
+                bag.close()
     recorder.facts.update(_facts(outcome, options, start))
     return outcome
 
@@ -194,6 +207,9 @@ def _verdict(outcome: Outcome) -> record.Verdict:
     if outcome.settle_s is not None:
         from servo_nodes.ros.demo_run import MOST_DEG, MOST_MM
         text = f'It settled {outcome.settle_s:.1f} s after it was engaged, {true}'
+        if outcome.stops:
+            times = 'once' if outcome.stops == 1 else f'{outcome.stops} times'
+            text += f' It stopped {times} on the way, and moved on by itself.'
         if outcome.good:
             return record.Verdict(True, 'The camera came back to the view it was taught.', text)
         return record.Verdict(False, 'The camera settled, but not where it was taught.',
@@ -212,6 +228,7 @@ def _facts(outcome: Outcome, options: argparse.Namespace,
     if outcome.settle_s is not None:
         result = {'from engaging to settled': f'{outcome.settle_s:.1f} s', **result}
     return {'Result': result, 'Run': {'start': start.words(), 'seed': options.seed,
+                                      'faults': ', '.join(options.fault) or 'none',
                                       'platform': platform.platform(terse=True)},
             'Versions': {'servo_nodes': __version__, 'python': platform.python_version(),
                          **_versions()},
@@ -235,7 +252,7 @@ def _result(outcome: Outcome, options: argparse.Namespace, start: Start) -> dict
         **{name: value if math.isfinite(value) else None for name, value in figures.items()},
         'state': outcome.state, 'reason': outcome.reason, 'stops': outcome.stops,
         'seed': options.seed, 'start': [*start.translation, *start.rotation_deg],
-        'report': str(options.out / 'report.html')}
+        'faults': options.fault, 'report': str(options.out / 'report.html')}
 
 
 def _require(package: str, remedy: str) -> None:

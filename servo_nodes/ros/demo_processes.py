@@ -20,6 +20,7 @@ import subprocess
 import sys
 import typing
 from collections.abc import Mapping, Sequence
+from importlib import metadata
 
 FIRST_DOMAIN, LAST_DOMAIN = 1, 101
 LOG_LINES = 8
@@ -28,6 +29,8 @@ _LEAD_OUT = ('ROS_STATIC_PEERS', 'ROS_DISCOVERY_SERVER', 'ROS_SUPER_CLIENT', 'RO
              'CYCLONEDDS_URI', 'ZENOH_CONFIG_OVERRIDE', 'ZENOH_SESSION_CONFIG_URI',
              'FASTDDS_BUILTIN_TRANSPORTS', 'ROS_NAMESPACE')
 _PR_SET_PDEATHSIG = 1
+# The second is the older one; later releases still read it, with a warning.
+PROFILE_NAMES = ('FASTDDS_DEFAULT_PROFILES_FILE', 'FASTRTPS_DEFAULT_PROFILES_FILE')
 
 
 class Trouble(RuntimeError):
@@ -59,12 +62,19 @@ def isolated(environment: Mapping[str, str], domain: int) -> dict[str, str]:
     kept = {name: value for name, value in environment.items() if name not in _LEAD_OUT}
     kept |= {'ROS_DOMAIN_ID': str(domain), 'ROS_AUTOMATIC_DISCOVERY_RANGE': 'LOCALHOST',
              'PYTHONUNBUFFERED': '1', 'RCUTILS_COLORIZED_OUTPUT': '0'}
-    profile = dds_profile()
-    for name in ('FASTDDS_DEFAULT_PROFILES_FILE', 'FASTRTPS_DEFAULT_PROFILES_FILE'):
+    for name in PROFILE_NAMES:
         kept.pop(name, None)
-        if profile is not None:
-            kept[name] = str(profile)
+    profile = dds_profile()
+    if profile is not None:
+        kept[PROFILE_NAMES[_is_older_than_kilted(environment)]] = str(profile)
     return kept
+
+
+def _is_older_than_kilted(environment: Mapping[str, str]) -> bool:
+    """Return whether the middleware knows its profile by the older name alone."""
+    with contextlib.suppress(metadata.PackageNotFoundError):
+        return bool(metadata.version('ros-jazzy-rclpy'))
+    return environment.get('ROS_DISTRO') in ('humble', 'iron', 'jazzy')
 
 
 def dds_profile() -> pathlib.Path | None:

@@ -7,19 +7,24 @@ from __future__ import annotations
 import math
 import statistics
 import time
-from collections.abc import Callable
+import typing
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
 
-from servo_nodes.report.record import Event
+from servo_nodes.report.record import Event, Scalar
 from servo_nodes.ros.demo_processes import Trouble
-from servo_nodes.ros.demo_watch import Watch, offsets, speeds
+from servo_nodes.ros.demo_watch import Watch, offsets, plain_value, speeds
 from servo_nodes.values import SECOND_NS, Floats, Stamp, State
 
 HOME_DISTANCE_M = 0.42
 READY_S, SEEN_S, LINGER_S = 30.0, 10.0, 1.0
 MOST_MM, MOST_DEG = 0.4, 0.06
+FIRST_FAULT_S, FAULT_S = 0.8, 1.0
+FAULTS: Mapping[str, Mapping[str, object]] = {
+    'occlusion': {'faults.black': 1.0}, 'stall': {'faults.drop': 1.0},
+    'freeze': {'faults.freeze': True}}
 
 
 @dataclass(frozen=True)
@@ -49,7 +54,7 @@ class Outcome:
     reason: str = 'none'
     detail: str = ''
     stops: int = 0
-    parameters: dict[str, dict[str, bool | int | float | str]] = field(default_factory=dict)
+    parameters: dict[str, dict[str, Scalar]] = field(default_factory=dict)
 
     @property
     def good(self) -> bool:
@@ -61,10 +66,15 @@ class Outcome:
 class Run:
     """One demo; `say` takes lines for the reader, `show` the progress of the moment."""
 
-    def __init__(self, watch: Watch, start: Start, *, timeout: float, say: Callable[[str], None],
+    def __init__(self, watch: Watch, start: Start, *, faults: Sequence[str] = (), timeout: float,
+                 bag: typing.Any = None, say: Callable[[str], None],
                  show: Callable[[str], None]) -> None:
         self._watch, self._start, self._timeout = watch, start, timeout
-        self._say, self._show = say, show
+        self._say, self._show, self._bag = say, show, bag
+        self._faults = [(FIRST_FAULT_S + 2 * FAULT_S * index, kind)
+                        for index, kind in enumerate(faults)]
+        self._fault_ends: Stamp | None = None
+        self._parameters: dict[str, dict[str, typing.Any]] = {}
         self._home: Floats | None = None
         self._engaged: Stamp = 0
         self._settled: Stamp | None = None
@@ -98,7 +108,9 @@ class Run:
             raise Trouble(f'{", ".join(name for name in there if not there[name])}: expected '
                           f'messages within {READY_S:g} s, got none')
         for node in ('tracker', 'controller', 'simulator'):
-            self.outcome.parameters[node] = watch.parameters(node)
+            self._parameters[node] = watch.parameters(node)
+            self.outcome.parameters[node] = {
+                name: plain_value(value) for name, value in self._parameters[node].items()}
         caps = self.outcome.parameters['controller']
         watch.caps = float(caps['caps.linear']), float(caps['caps.angular'])
 
@@ -124,14 +136,16 @@ class Run:
             raise Trouble(f'simulator/restart: expected a new start, got: {answer.text}')
         begun, pose = watch.images, self._home
         watch.spin_until(lambda: watch.images > begun + 3 and watch.pose is not pose, 2.0)
-        watch.recording = True
-        watch.recorder.turn(Event(time.time_ns(), str(watch.state and watch.state.value)))
         stamp = time.time_ns()
         if not watch.spin_until(lambda: watch.view is not None and len(watch.view) > 0
                                 and watch.view.stamp > stamp, SEEN_S):
             raise Trouble('features: expected the goal to be seen from the start within '
                           f'{SEEN_S:g} s, got nothing; start nearer to home')
-        watch.spin_until(lambda: False, 0.4)
+        watch.recording = True
+        if self._bag is not None:
+            self._bag.begin(self._parameters)
+        watch.recorder.turn(Event(time.time_ns(), str(watch.state and watch.state.value)))
+        watch.spin_until(lambda: False, 0.5)
         self._say(f'Moved away by {self._start.words()}; error {watch.error_px:.1f} px.')
 
     def _engage(self) -> None:
@@ -155,6 +169,8 @@ class Run:
             self._follow()
             if watch.state is State.FAULTED:
                 return True
+            if self._faults or self._fault_ends is not None:
+                return False
             return self._settled is not None and (
                 time.time_ns() - self._settled > LINGER_S * SECOND_NS)
         watch.spin_until(done, self._timeout, self._progress)
@@ -184,8 +200,24 @@ class Run:
         if watch.state is not None:
             self._say(f'{self._seconds(now):6.2f} s  {watch.state.value}{reason}')
 
+    def _disturb(self) -> None:
+        """Let the planned faults begin and end."""
+        now = time.time_ns()
+        if self._fault_ends is not None and now >= self._fault_ends:
+            self._fault_ends = None
+            self._watch.set_parameters('simulator', {name: type(value)(0) for values in
+                                                     FAULTS.values() for name, value in
+                                                     values.items()})
+            self._say(f'{self._seconds(now):6.2f} s  the fault is over')
+        elif self._faults and self._seconds(now) >= self._faults[0][0]:
+            kind = self._faults.pop(0)[1]
+            self._say(f'{self._seconds(now):6.2f} s  fault: {kind}')
+            self._watch.set_parameters('simulator', FAULTS[kind])
+            self._fault_ends = now + round(FAULT_S * SECOND_NS)
+
     def _progress(self) -> None:
         watch = self._watch
+        self._disturb()
         if watch.state is None:
             return
         linear, angular = speeds(watch.twist)

@@ -37,6 +37,10 @@ _DEEP = QoSProfile(depth=20, reliability=ReliabilityPolicy.RELIABLE)
 _LATCHED = QoSProfile(depth=10, reliability=ReliabilityPolicy.RELIABLE,
                       durability=DurabilityPolicy.TRANSIENT_LOCAL)
 _NEWEST = QoSProfile(depth=2, reliability=ReliabilityPolicy.BEST_EFFORT)
+QOS = {
+    'controller/state': _LATCHED, 'controller/error_px': _DEEP, 'controller/condition': _DEEP,
+    'controller/latency_ms': _DEEP, 'camera_twist': _DEEP, 'features': _DEEP, 'true_pose': _DEEP,
+    'camera_info': qos_profile_sensor_data, 'image': _NEWEST, '/diagnostics': _DEEP}
 _KINDS = {bool: (1, 'bool_value'), int: (2, 'integer_value'), float: (3, 'double_value'),
           str: (4, 'string_value'), tuple: (8, 'double_array_value')}
 
@@ -73,17 +77,17 @@ class Watch:
         self.node = rclpy.create_node('demo', namespace=namespace)
         self._executor = SingleThreadedExecutor()
         self._executor.add_node(self.node)
-        for kind, name, take, qos in (
-                (DiagnosticStatus, 'controller/state', self._take_state, _LATCHED),
-                (Float64, 'controller/error_px', self._take_error, _DEEP),
-                (Float64, 'controller/condition', self._take_condition, _DEEP),
-                (Float64, 'controller/latency_ms', self._take_latency, _DEEP),
-                (TwistStamped, 'camera_twist', self._take_twist, _DEEP),
-                (PointCloud2, 'features', self._take_features, _DEEP),
-                (PoseStamped, 'true_pose', self._take_pose, _DEEP),
-                (CameraInfo, 'camera_info', self._take_info, qos_profile_sensor_data),
-                (Image, 'image', self._take_image, _NEWEST)):
-            self.node.create_subscription(kind, name, take, qos)
+        for kind, name, take in (
+                (DiagnosticStatus, 'controller/state', self._take_state),
+                (Float64, 'controller/error_px', self._take_error),
+                (Float64, 'controller/condition', self._take_condition),
+                (Float64, 'controller/latency_ms', self._take_latency),
+                (TwistStamped, 'camera_twist', self._take_twist),
+                (PointCloud2, 'features', self._take_features),
+                (PoseStamped, 'true_pose', self._take_pose),
+                (CameraInfo, 'camera_info', self._take_info),
+                (Image, 'image', self._take_image)):
+            self.node.create_subscription(kind, name, take, QOS[name])
 
     def close(self) -> None:
         """Leave the graph."""
@@ -136,13 +140,13 @@ class Watch:
                           request).result
         return Answer(result.successful, result.reason)
 
-    def parameters(self, node: str) -> dict[str, bool | int | float | str]:
+    def parameters(self, node: str) -> dict[str, ParameterValue]:
         """Return every parameter of a node that a reader may want to know."""
         listed = self.ask(ListParameters, f'{node}/list_parameters', ListParameters.Request())
         names = [name for name in sorted(listed.result.names)
                  if not name.startswith(('qos_overrides', 'start_type_description'))]
         got = self.ask(GetParameters, f'{node}/get_parameters', GetParameters.Request(names=names))
-        return {name: _plain(value) for name, value in zip(names, got.values, strict=True)}
+        return dict(zip(names, got.values, strict=True))
 
     # -- noting
 
@@ -173,13 +177,13 @@ class Watch:
 
     def _take_twist(self, message: TwistStamped) -> None:
         self.twist = wire.twist_from_message(message).vector
-        self._note('twist', wire.stamp_from_time(message.header.stamp), *self.twist)
+        self._note('twist', time.time_ns(), *self.twist)
 
     def _take_features(self, message: PointCloud2) -> None:
         now, view = time.time_ns(), wire.view_from_cloud(message)
         self.view = view
         arrived = self._arrivals.pop(view.stamp, None)
-        if arrived is not None:
+        if arrived is not None and len(view):
             self._delivered = ((arrived - view.stamp) / 1e6, max(0, now - arrived) / 1e6)
         self._note('points', now, len(view))
         if self.recording and len(view) and self.camera is not None:
@@ -247,7 +251,8 @@ def _parameter_value(value: object) -> ParameterValue:
     return ParameterValue(type=kind, **{field: list(value) if isinstance(value, tuple) else value})
 
 
-def _plain(value: ParameterValue) -> bool | int | float | str:
+def plain_value(value: ParameterValue) -> bool | int | float | str:
+    """Return a parameter's value as a reader reads it."""
     for kind, field in _KINDS.values():
         if value.type == kind:
             found = getattr(value, field)
