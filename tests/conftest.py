@@ -4,6 +4,7 @@
 
 from __future__ import annotations
 
+import importlib.util
 import os
 from pathlib import Path
 
@@ -19,6 +20,16 @@ settings.load_profile('house')
 # A test must never reach a robot: neither another machine nor another run on this one.
 os.environ.setdefault('ROS_DOMAIN_ID', '97')
 os.environ['ROS_AUTOMATIC_DISCOVERY_RANGE'] = 'LOCALHOST'
+
+
+# Where there is no ROS 2, what needs it is left out as a whole, and the header says so.
+HAS_ROS = importlib.util.find_spec('rclpy') is not None
+collect_ignore = [] if HAS_ROS else ['ros']
+
+
+def pytest_report_header() -> str:
+    """Say what is left out."""
+    return 'ROS 2: found' if HAS_ROS else 'ROS 2: not installed, tests/ros is left out'
 
 
 @pytest.fixture(scope='session')
