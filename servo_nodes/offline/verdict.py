@@ -30,7 +30,9 @@ class PointsLimits(Checked):
     """Points in the views while the loop was on."""
 
     least: int = setting(8, low=1, high=20000,
-                         help='points that 95 % of the views have at least, while the loop is on')
+                         help='points that the share below of the views must have, at least')
+    share: float = setting(0.95, low=0.01, high=1.0,
+                           help='share of the views while the loop is on')
 
 
 @dataclass(frozen=True)
@@ -181,11 +183,11 @@ def _points(log: Log, limits: PointsLimits) -> Finding:
     below, value = 0, 0
     for value in sorted(log.points):
         below += log.points[value]
-        if below > 0.05 * count:
+        if below > (1.0 - limits.share) * count:
             break
     return Finding('points.least', value >= limits.least, float(value), float(limits.least), '',
-                   f'95 % of {count} views have at least {value} points, at least '
-                   f'{limits.least} expected')
+                   f'{100 * limits.share:g} % of {count} views have at least {value} points, at '
+                   f'least {limits.least} expected')
 
 
 def _latency(log: Log, limits: LatencyLimits) -> Finding:

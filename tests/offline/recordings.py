@@ -112,7 +112,8 @@ def parameters_message(node, values, stamp, *, changed=False):
     for name, value in values.items():
         number, attribute = names[type(value)]
         empty = {'bool_value': False, 'integer_value': 0, 'double_value': 0.0, 'string_value': '',
-                 'byte_array_value': [], 'bool_array_value': np.array([], bool),
+                 'byte_array_value': np.array([], np.uint8),
+                 'bool_array_value': np.array([], bool),
                  'integer_array_value': np.array([], np.int64),
                  'double_array_value': np.array([], float), 'string_array_value': []}
         parameters.append(kind('rcl_interfaces/msg/Parameter')(

@@ -188,7 +188,8 @@ def test_metadata_that_contradict_the_files_lose(tmp_path):
     (folder / 'metadata.yaml').write_text(yaml.safe_dump(page))
     bag = Bag(folder)
     assert len(list(bag.messages())) == 9 and not bag.damages
-    assert bag.notes == [f'{folder / "metadata.yaml"}: it announces 500 messages, the files hold 9']
+    assert bag.notes == [
+        f'{folder / "metadata.yaml"}: it announces 500 messages, the files hold 9']
 
 
 def test_metadata_that_name_another_file_than_the_one_there_lose(tmp_path):

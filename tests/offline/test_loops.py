@@ -56,7 +56,8 @@ def run(events, until=None, tracker=None, **options):
 
 
 def test_it_ticks_at_the_rate_from_the_first_event_to_the_end():
-    times = [time for time, _ in decided(run([Event(7, Kind.GRAPH, (1, 1))], until=7 + 5 * PERIOD))]
+    outcomes = run([Event(7, Kind.GRAPH, (1, 1))], until=7 + 5 * PERIOD)
+    times = [time for time, _ in decided(outcomes)]
     assert times == [7 + number * PERIOD for number in range(6)]
 
 

@@ -19,6 +19,8 @@ from servo_nodes.offline.bags_topics import topics_of_parts
 from servo_nodes.offline.loops import Decided, Loop
 from servo_nodes.offline.replay import main
 from servo_nodes.offline.replay_events import Script
+from servo_nodes.offline.replay_goal import Request
+from servo_nodes.offline.replay_run import replayed
 from servo_nodes.offline.replay_settings import Choice
 from servo_nodes.report import record as records
 from servo_nodes.tracking.options import TrackerSettings
@@ -113,17 +115,25 @@ def test_a_run_without_faults_passes_and_claims_no_convergence(tmp_path, capsys,
     assert 'cannot show that the loop converges' in result['caution']
 
 
-def test_an_occlusion_is_named_with_its_moment_and_the_time_to_stop(tmp_path, capsys, occluded):
-    folder = recordings.written(tmp_path / 'run', occluded.messages)
-    code, result = replay(capsys, folder, '--out', tmp_path / 'out')
+@pytest.fixture(scope='module')
+def judged(tmp_path_factory, occluded):
+    """Return what the tool leaves of the occluded run: its folder, and the verdict in there."""
+    folder = recordings.written(tmp_path_factory.mktemp('judged') / 'run', occluded.messages)
+    out = folder.parent / 'out'
+    assert main([str(folder), '--out', str(out)]) == 1
+    return out, json.loads((out / 'verdict.json').read_text())
+
+
+def test_an_occlusion_is_named_with_its_moment_and_the_time_to_stop(judged):
+    out, result = judged
     stop = result['stops'][0]
-    assert (code, stop['reason'], len(result['stops'])) == (1, 'too_few_points', 1)
+    assert (stop['reason'], len(result['stops'])) == ('too_few_points', 1)
     assert abs(stop['at_s'] - BLIND[0]) < 0.1
     assert 0.0 < stop['reaction_s'] <= 0.25
     assert 0.9 < stop['lasted_s'] < 1.3
     assert finding(result, 'points.least')['ok'] is False
     assert finding(result, 'stop.missed')['ok'] and finding(result, 'stop.false')['ok']
-    page = (tmp_path / 'out' / 'page.html').read_text()
+    page = (out / 'page.html').read_text()
     assert 'too few points' in page and 'cannot show that the loop converges' in page
 
 
@@ -292,39 +302,39 @@ def test_a_stop_of_the_recorded_controller_alone_is_a_missed_one(tmp_path, capsy
     ({'stop__time': 0.01}, 'stop.time'), ({'stop__held': 0.01}, 'stop.held')])
 def test_every_threshold_is_judged(tmp_path, capsys, occluded, values, name):
     folder = recordings.written(tmp_path / 'run', occluded.messages)
-    lenient = {'points__least': 1, 'stop__held': 1.0}
+    lenient = {'points__share': 0.5, 'stop__held': 1.0}
     assert replay(capsys, folder, '--thresholds', limits(tmp_path, **lenient))[0] == 0
-    code, result = replay(capsys, folder, '--thresholds', limits(tmp_path, **{**lenient, **values}))
+    strict = limits(tmp_path, **{**lenient, **values})
+    code, result = replay(capsys, folder, '--thresholds', strict)
     failed = [item['name'] for item in result['findings'] if item['ok'] is False]
     assert (code, failed) == (1, [name])
 
 
 def test_two_replays_are_compared(tmp_path, capsys, plain):
     folder = recordings.written(tmp_path / 'run', plain.messages)
-    assert replay(capsys, folder, '--out', tmp_path / 'one')[0] == 0
-    code, result = replay(capsys, folder, '--against', tmp_path / 'one')
+    record = tmp_path / 'other.json'
+    records.save(replayed(Bag(folder), Request()).record, record)
+    code, result = replay(capsys, folder, '--against', record)
     assert code == 0
     assert finding(result, 'against.linear')['value'] < 1e-8
     params = tmp_path / 'params.yaml'
-    params.write_text('controller: {ros__parameters: {law.gain: 0.99}}')
-    code, result = replay(capsys, folder, '--against', tmp_path / 'one', '--params', params,
-                          '--thresholds', limits(tmp_path, against__linear=1e-5))
+    gain = 0.995 * ControllerSettings().law.gain
+    params.write_text(f'controller: {{ros__parameters: {{law.gain: {gain}}}}}')
+    code, result = replay(capsys, folder, '--against', record, '--params', params,
+                          '--thresholds', limits(tmp_path, against__linear=0.0001))
     assert code == 1 and finding(result, 'against.linear')['ok'] is False
     assert finding(result, 'deviation.linear')['ok']
 
 
-def test_a_replay_of_another_run_is_not_taken_for_the_same(tmp_path, capsys, plain, occluded):
-    one = recordings.written(tmp_path / 'one', plain.messages)
-    other = recordings.written(tmp_path / 'other', occluded.messages)
-    replay(capsys, one, '--out', tmp_path / 'out')
-    code, result = replay(capsys, other, '--against', tmp_path / 'out')
+def test_a_replay_of_another_run_is_not_taken_for_the_same(tmp_path, capsys, plain, judged):
+    folder = recordings.written(tmp_path / 'run', plain.messages)
+    code, result = replay(capsys, folder, '--against', judged[0])
     assert code == 1 and finding(result, 'against.states')['ok'] is False
 
 
-def test_junit_counts_what_failed_and_what_was_not_judged(tmp_path, capsys, occluded):
-    folder = recordings.written(tmp_path / 'run', occluded.messages)
-    _, result = replay(capsys, folder, '--out', tmp_path / 'out')
-    suite = ET.parse(tmp_path / 'out' / 'junit.xml').getroot()[0]
+def test_junit_counts_what_failed_and_what_was_not_judged(judged):
+    out, result = judged
+    suite = ET.parse(out / 'junit.xml').getroot()[0]
     counts = [sum(item['ok'] is kind for item in result['findings']) for kind in (False, None)]
     assert [int(suite.get(name)) for name in ('failures', 'skipped')] == counts
     assert len(suite) == int(suite.get('tests')) == len(result['findings'])
