@@ -21,6 +21,7 @@ from servo_nodes.values import Floats
 _REACH_PX = 2
 _LEAST_KNOWN = 0.5
 _MOST_SPREAD = 0.03
+_TRIPLES, _TUKEY_ROUNDS = 300, 5
 
 
 def depths_on_plane(plane: Floats, xy: Floats) -> Floats:
@@ -114,6 +115,10 @@ def chosen(source: str, *, ratios: Floats, goal: Floats, constant: float, found:
 def plane_in_depth(metres: Metres, xy: Floats, uv: Floats) -> tuple[Floats, float] | None:
     """Fit n . X = d to the depths at rays `xy` (N, 2), pixels `uv`.
 
+    On a plane the inverse depth is linear in the ray, 1/Z = (n / d) . (x, y, 1). The start is the
+    plane through three points whose median distance is least (Rousseeuw 1984), so that other
+    surfaces in the picture do not count; Tukey's weights refine it.
+
     Returns
     -------
     (plane, deviation) or None
@@ -124,16 +129,32 @@ def plane_in_depth(metres: Metres, xy: Floats, uv: Floats) -> tuple[Floats, floa
     known = np.isfinite(depths)
     if known.sum() < 6:
         return None
-    points = np.concatenate([xy[known], np.ones((int(known.sum()), 1))], axis=1)
-    points *= depths[known, None]
-    weights = np.ones(len(points))
-    for _ in range(8):
-        centre = weights @ points / weights.sum()
-        normal = np.linalg.svd((points - centre) * np.sqrt(weights)[:, None])[2][2]
-        normal = normal if normal @ centre > 0 else -normal
-        distance = np.abs((points - centre) @ normal)
-        scale = max(1.4826 * float(np.median(distance)), 1e-4)
-        weights = (1 - np.minimum(distance / (4.685 * scale), 1.0) ** 2) ** 2 + 1e-9
-    if normal[2] < 0.05:
+    rays = np.concatenate([xy[known], np.ones((int(known.sum()), 1))], axis=1)
+    depths = depths[known]
+    slope = _least_median(rays, depths)
+    if slope is None:
         return None
-    return np.append(normal, normal @ centre), float(np.median(distance))
+    for _ in range(_TUKEY_ROUNDS):
+        distance = np.abs(depths * (rays @ slope) - 1)
+        scale = max(1.4826 * float(np.median(distance)), 1e-4)
+        root = 1 - np.minimum(distance / (4.685 * scale), 1.0) ** 2
+        slope = np.linalg.lstsq(rays * root[:, None], root / depths, rcond=None)[0]
+    length = float(np.linalg.norm(slope))
+    if not slope[2] > 0.05 * length:
+        return None
+    distance = np.abs(depths * (rays @ slope) - 1)
+    return np.append(slope, 1.0) / length, float(np.median(distance)) / length
+
+
+def _least_median(rays: Floats, depths: Floats) -> Floats | None:
+    """Return the slope (3,) through three of the points that leaves the least median residual."""
+    # Steps of irrational share visit the points evenly: nothing random, nothing twice the same.
+    turns = np.arange(1, _TRIPLES + 1)[:, None] * np.sqrt([2.0, 3.0, 5.0])
+    triples = ((turns % 1.0) * len(rays)).astype(int)
+    corners = rays[triples]
+    usable = np.abs(np.linalg.det(corners)) > 1e-6
+    if not usable.any():
+        return None
+    slopes = np.linalg.solve(corners[usable], 1 / depths[triples[usable]][:, :, None])[:, :, 0]
+    residuals = np.median(np.abs(depths * (slopes @ rays.T) - 1), axis=1)
+    return np.asarray(slopes[np.argmin(residuals)], dtype=np.float64)

@@ -15,7 +15,7 @@ import numpy as np
 from servo_nodes.tracking.pictures import Grey
 from servo_nodes.values import SECOND_NS, Stamp
 
-BLACK_LEVEL, WHITE_LEVEL = 12, 250
+BLACK_LEVEL, WHITE_LEVEL = 12, 245
 FROZEN_NS = SECOND_NS // 2
 _FROZEN_COUNT = 4
 _LEAST_CONTRAST = 2.5

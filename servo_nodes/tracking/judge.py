@@ -22,8 +22,7 @@ import cv2
 import numpy as np
 
 from servo_nodes.goal import Goal
-from servo_nodes.tracking import consensus, homography
-from servo_nodes.tracking.keypoints import Describer
+from servo_nodes.tracking import consensus
 from servo_nodes.tracking.pictures import Grey
 from servo_nodes.values import Floats
 
@@ -31,7 +30,6 @@ AXES = ('x', 'y', 'z', 'rx', 'ry', 'rz')
 MOST_SATURATED, LEAST_SPREAD = 0.2, 0.08
 MOST_BLUR, MOST_SCATTER, MOST_TURN = 0.93, 5e-4, np.radians(0.05)
 HOPELESS_SCATTER, HOPELESS_TURN = 5e-3, np.radians(0.5)
-_ELSEWHERE_PX = 24.0
 _LAPLACIAN = np.array([[1, -2, 1], [-2, 4, -2], [1, -2, 1]], dtype=np.float32)
 _MAD = 1.482602219
 _LEAST_NOISE = 0.5
@@ -57,8 +55,8 @@ class Evidence:
 
 
 def judged(goal: Goal, evidence: Evidence, *, least_points: int,
-           describer: Describer | None) -> Verdict:
-    """Judge a view; `describer` None (markers) leaves out sharpness and self-similarity."""
+           alike_elsewhere: int | None) -> Verdict:
+    """Judge a view; `alike_elsewhere` None (markers) leaves out sharpness and repetition."""
     view = goal.view
     noise = noise_of(view)
     saturated = float(np.mean((view <= 1) | (view >= 254)))
@@ -88,15 +86,14 @@ def judged(goal: Goal, evidence: Evidence, *, least_points: int,
         warnings.append(f'{saturated:.0%} of the view is black or white: change the exposure')
     if spread < LEAST_SPREAD:
         warnings.append('the points crowd in a small part of the view')
-    if describer is not None:
+    if alike_elsewhere is not None:
         blur = blur_of(view)
         figures['blur'] = round(blur, 3)
         if blur > MOST_BLUR:
             warnings.append('the view is not sharp')
-        alike = likeness_elsewhere(goal, describer)
-        figures['alike_elsewhere'] = alike
-        if alike:
-            return Verdict(f'the view repeats itself: {alike} keypoints would fit as well '
+        figures['alike_elsewhere'] = alike_elsewhere
+        if alike_elsewhere:
+            return Verdict(f'the view repeats itself: {alike_elsewhere} points are also found '
                            'elsewhere in it, so another place could be taken for the goal',
                            (), figures)
     return Verdict('', tuple(warnings), figures)
@@ -137,29 +134,3 @@ def blur_of(view: Grey) -> float:
                        + cv2.Sobel(picture, cv2.CV_32F, 0, 1) ** 2).mean())
                 for picture in (smooth, smoother)]
     return float(np.sqrt(energies[1] / max(energies[0], 1e-9)))
-
-
-def likeness_elsewhere(goal: Goal, describer: Describer) -> int:
-    """Return how many keypoints of the view also fit at another place of it; 0 when chance would.
-
-    Every keypoint is paired with its best likeness that lies elsewhere; those pairs must not agree
-    on a view of the goal, by the rule that accepts one.
-    """
-    keypoints = describer.describe(goal.view)
-    first, second = describer.match_elsewhere(keypoints, _ELSEWHERE_PX)
-    xy = goal.camera.normalised_from_pixels(keypoints.uv)
-    sure = np.isfinite(xy[first, 0]) & np.isfinite(xy[second, 0])
-    first, second = first[sure], second[sure]
-    threshold_px = 3.0
-    plane = consensus.plane_through(xy[first], xy[second], threshold_px / goal.camera.fx)
-    if plane is None:
-        return 0
-    agreeing = int(np.count_nonzero(plane[1]))
-    alarms = consensus.log10_alarms(len(first), agreeing, threshold_px, float(goal.view.size))
-    matrix = homography.normed(plane[0], xy[first][plane[1]])
-    if matrix is None or alarms > consensus.LOG10_ONCE_IN or not homography.plausible(
-            matrix, xy[first][plane[1]]):
-        return 0
-    if agreeing < consensus.LEAST_SHARE * len(keypoints):
-        return 0
-    return agreeing

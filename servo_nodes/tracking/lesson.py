@@ -14,6 +14,8 @@ from servo_nodes.camera import Camera
 from servo_nodes.goal import Goal
 from servo_nodes.tracking import depth as depths
 from servo_nodes.tracking import judge
+from servo_nodes.tracking.ambiguity import alike_elsewhere
+from servo_nodes.tracking.follow import Limits
 from servo_nodes.tracking.keypoints import Describer
 from servo_nodes.tracking.markers import CORNER_FLOOR_PX, MarkerReference, Markers
 from servo_nodes.tracking.options import TrackerSettings
@@ -96,13 +98,15 @@ def _verdict(goal: Goal, settings: TrackerSettings) -> tuple[judge.Verdict, int]
         scatter = np.full(len(found), CORNER_FLOOR_PX / judge.noise_of(_grey(goal)))
         evidence = judge.Evidence(found.uv, found.xy, found.depths, scatter)
         return judge.judged(goal, evidence, least_points=_LEAST_MARKER_POINTS,
-                            describer=None), len(found)
+                            alike_elsewhere=None), len(found)
     describer = Describer(settings.detector.kind, settings.detector.features)
     reference = Reference(goal, points=settings.detector.points, describer=describer)
     evidence = judge.Evidence(reference.uv, reference.xy, reference.depths,
                               reference.patches.scatter_px)
+    limits = Limits(settings.follow.likeness, settings.follow.residual_px)
+    alike = alike_elsewhere(reference, describer, limits, settings.consensus.acquire_points)
     return judge.judged(goal, evidence, least_points=settings.teach.least_points,
-                        describer=describer), len(reference)
+                        alike_elsewhere=alike), len(reference)
 
 
 def _grey(goal: Goal) -> Grey:

@@ -37,8 +37,8 @@ _GRAIN = 32.0
 _MIDDLE_GREY = np.float32(128)
 _LEAST_GAIN, _MOST_GAIN = 0.1, 10.0
 _LEAST_ENERGY = 1.0
-# A last step of this length leaves an error of the second order, about a hundredth of a pixel.
-_ENOUGH_PX = 0.2
+# A last step of this length leaves an error of the second order, some thousandths of a pixel.
+_ENOUGH_PX = 0.1
 MOST_STEP_PX = 3.0
 Singles = npt.NDArray[np.float32]
 Index = npt.NDArray[np.intp]

@@ -75,7 +75,7 @@ def metres_from_depth(image: Image) -> Metres:
     elif image.encoding == '32FC1':
         metres = _checked(image.array, np.float32, 2, image.encoding).astype(np.float32)
     else:
-        raise ValueError('depth encoding: expected 16UC1 (mm) or 32FC1 (m), '
+        raise ValueError('encoding: expected 16UC1 (mm) or 32FC1 (m), '
                          f'got {image.encoding!r}')
     with np.errstate(invalid='ignore'):
         metres[~((metres > 0) & (metres < 1e3))] = np.nan

@@ -99,13 +99,16 @@ class Tracker:
         """Take new settings as a whole; the goal is prepared anew and found anew."""
         former = self._settings
         self._settings = settings
+        was_ready = self._reference is not None
         try:
             refusal = self._prepare()
         except ValueError as error:
+            refusal, was_ready = str(error), True
+        if refusal and was_ready:
             self._settings = former
             self._prepare()
-            return Answer(False, str(error))
-        return Answer(not refusal, refusal or 'settings taken')
+            return Answer(False, refusal)
+        return Answer(True, 'settings taken')
 
     def calibrate(self, calibration: Calibration) -> Answer:
         """Take the camera's calibration; the same one again costs nothing.
@@ -241,7 +244,7 @@ def _metres(image: Image | None, camera: Camera) -> tuple[Metres | None, str]:
     try:
         metres = metres_from_depth(image)
     except ValueError as error:
-        return None, f'; {error}'
+        return None, f'; depth {error}'
     if metres.shape != (camera.height, camera.width):
         return None, f'; depth {_other_size(metres, camera)}'
     return metres, ''

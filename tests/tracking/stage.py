@@ -2,8 +2,9 @@
 # SPDX-License-Identifier: Apache-2.0
 """A small stage for the tracker's tests: a photograph on a plane, seen through an exact lens.
 
-Every pixel is the mean of samples on its own rays, so distortion and perspective are exact, and where
-each point of the goal lies is known by geometry alone. Independent of the package's simulator.
+Every pixel is the mean of samples on its own rays, so distortion and perspective are exact, and
+where each point of the goal lies is known by geometry alone. Independent of the package's
+simulator.
 """
 
 from __future__ import annotations
@@ -18,8 +19,8 @@ from servo_nodes import motion
 from servo_nodes.camera import Camera
 from servo_nodes.values import Calibration, Floats, Image
 
-# Published calibrations: TUM fr1 RGB (plumb_bob) and a milder rational and equidistant lens of that
-# size whose numbers are ours.
+# Published calibrations: TUM fr1 RGB (plumb_bob) and EuRoC cam0, moved to this size (barrel); the
+# rational and equidistant lens have numbers of our own.
 LENSES: dict[str, tuple[str, tuple[float, ...], tuple[float, ...]]] = {
     'pinhole': ('plumb_bob', (525.0, 525.0, 319.5, 239.5), ()),
     'plumb_bob': ('plumb_bob', (517.3, 516.5, 318.6, 255.3),
@@ -49,7 +50,7 @@ def photograph(name: str) -> npt.NDArray[np.uint8]:
 
 def pose_facing(distance: float, *, shift: tuple[float, float] = (0.0, 0.0),
                 turn_deg: tuple[float, float, float] = (0.0, 0.0, 0.0)) -> Floats:
-    """Return T_CW of a camera `distance` before the plane's middle, then shifted (m) and turned."""
+    """Return T_CW of a camera `distance` before the plane, then shifted (m) and turned."""
     home = np.eye(4)
     home[2, 3] = distance
     offset = motion.pose_from_parts(
@@ -61,7 +62,8 @@ class Stage:
     """A plane z = 0 of the world, `wide` m across, with a photograph on it."""
 
     def __init__(self, picture: npt.NDArray[np.uint8], lens: str = 'plumb_bob', *,
-                 wide: float = 0.6, samples: int = 3, size: tuple[int, int] = (640, 480)) -> None:
+                 wide: float = 0.6, samples: int = 3, size: tuple[int, int] = (640, 480),
+                 border: int | None = None) -> None:
         self.calibration = calibration_of(lens, *size)
         self.camera = Camera.from_calibration(self.calibration)
         # Finer than any pixel, so that sampling it linearly is near enough to the photograph.
@@ -70,28 +72,32 @@ class Stage:
         scale = across / wide
         self._to_texture = np.array([[scale, 0, across / 2 - 0.5], [0, scale, high / 2 - 0.5],
                                      [0, 0, 1]])
-        self._samples = samples
+        # Beyond the picture: its mirror image, or one grey.
+        self._border = ((cv2.BORDER_REFLECT_101, 0) if border is None
+                        else (cv2.BORDER_CONSTANT, border))
         step = (np.arange(samples) + 0.5) / samples - 0.5
         u = (np.arange(size[0])[:, None] + step).ravel()
         v = (np.arange(size[1])[:, None] + step).ravel()
         grid = np.stack(np.meshgrid(u, v), axis=-1)
         rays = np.concatenate([
             self.camera.normalised_from_pixels(rows) for rows in np.array_split(grid, 8)])
-        self._rays = np.concatenate([rays, np.ones(rays.shape[:2] + (1,))], axis=-1).astype(
-            np.float32)
+        self._fine = rays.shape[:2]
+        self._rays = np.ones((3, rays.shape[0] * rays.shape[1]), np.float32)
+        self._rays[:2] = rays.reshape(-1, 2).T
 
     def render(self, T_CW: Floats, rng: np.random.Generator | None = None, noise: float = 2.0,
                gain: float = 1.0) -> npt.NDArray[np.uint8]:
-        """Return the picture of a camera at T_CW; grey noise of `noise` levels when `rng` is given."""
+        """Return the picture of a camera at T_CW; with grey noise when `rng` is given."""
         plane = np.linalg.inv(T_CW[:3, [0, 1, 3]])
-        at = self._rays @ (self._to_texture @ plane).T.astype(np.float32)
-        below = np.where(at[..., 2] > 0, at[..., 2], np.nan)
-        sampled = cv2.remap(self._texture, at[..., 0] / below, at[..., 1] / below, cv2.INTER_LINEAR,
-                            borderMode=cv2.BORDER_REFLECT_101)
-        n = self._samples
-        light = sampled.reshape(sampled.shape[0] // n, n, -1, n).mean((1, 3)) * gain
+        u, v, below = (self._to_texture @ plane).astype(np.float32) @ self._rays
+        below = np.where(below > 0, below, np.float32(1e6))
+        sampled = cv2.remap(self._texture, (u / below).reshape(self._fine),
+                            (v / below).reshape(self._fine), cv2.INTER_LINEAR,
+                            borderMode=self._border[0], borderValue=self._border[1])
+        light = cv2.resize(sampled.astype(np.float32), self.camera.size,
+                           interpolation=cv2.INTER_AREA) * np.float32(gain)
         if rng is not None:
-            light = light + rng.normal(0, noise, light.shape)
+            light += np.float32(noise) * rng.standard_normal(light.shape, np.float32)
         return np.clip(np.rint(light), 0, 255).astype(np.uint8)
 
     def image(self, T_CW: Floats, rng: np.random.Generator | None = None, *, stamp: int = 0,
@@ -105,7 +111,7 @@ class Stage:
         return typing.cast(Floats, offset / (xy @ normal[:2] + normal[2]))
 
     def moved(self, T_from: Floats, T_to: Floats, xy: Floats) -> tuple[Floats, Floats]:
-        """Return where the plane's points at rays `xy` of one camera lie for another, and depths."""
+        """Return where the points at rays `xy` of one camera lie for another, and depths."""
         z = self.depths(T_from, xy)
         points = np.concatenate([xy, np.ones((len(xy), 1))], axis=1) * z[:, None]
         both = T_to @ np.linalg.inv(T_from)
