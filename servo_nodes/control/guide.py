@@ -34,7 +34,7 @@ class Lead:
     ----------
     goal_xy : (2, N), normalised
     goal_inverse : (N,), 1/Z, 1/m
-    basis : (10, N), of the normal equations there; None at the goal itself
+    basis : (10, N), of the normal equations there
     twist : (6,), of the path itself, to be added to the law's; None without a path
     left : float, share of the path to go; 0 without a path
     refusal : str, why the law must not run from here; empty when it may
@@ -42,7 +42,7 @@ class Lead:
 
     goal_xy: Floats
     goal_inverse: Floats
-    basis: Floats | None = None
+    basis: Floats
     twist: Floats | None = None
     left: float = 0.0
     refusal: str = ''
@@ -57,10 +57,12 @@ class Guide:
         self._left = 0.0
         self._last: Stamp = 0
         self._refusal = ''
+        self._direct: tuple[Sight, Lead] | None = None
 
     def clear(self) -> None:
         """Head for the goal directly, without judging the start."""
         self._pending, self._path, self._left, self._refusal = False, None, 0.0, ''
+        self._direct = None
 
     def begin(self) -> None:
         """Judge the start with the next view."""
@@ -84,8 +86,11 @@ class Guide:
             self._plan(xy.T, 1 / inverse, sight, settings)
             self._last = now
         if self._path is None:
-            goal = sight.goal_rays
-            return Lead(goal[:2], goal[3], refusal=self._refusal)
+            if self._direct is None or self._direct[0] is not sight:
+                goal = sight.goal
+                lead = Lead(goal.xy, goal.inverse, goal.basis, refusal=self._refusal)
+                self._direct = sight, lead
+            return self._direct[1]
         return self._along(self._path, xy, sight, now, settings, focal_px)
 
     def _along(self, way: path.Path, xy: Floats, sight: Sight, now: Stamp, settings: LawSettings,

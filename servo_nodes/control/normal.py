@@ -40,7 +40,8 @@ def _selections() -> Floats:
 SELECTIONS = _selections()
 _TABLE = np.ascontiguousarray(
     np.einsum('ria,rjb->ijab', SELECTIONS, SELECTIONS).reshape(49, SIZE * SIZE))
-_LEFT = np.ascontiguousarray(np.swapaxes(SELECTIONS, -1, -2))
+_LEFT = np.ascontiguousarray(np.swapaxes(SELECTIONS[:, :6], -1, -2))
+_ERRORS = SELECTIONS[:, 6]
 
 
 def basis(xy: Floats, inverse_depths: Floats, goal_xy: Floats | None = None) -> Floats:
@@ -78,7 +79,7 @@ def system(b: Floats, squared_weights: Floats) -> Floats:
 
 def squared_residuals(b: Floats, x: Floats) -> Floats:
     """Return the squared lengths (N,) of e - L x for a basis (10, N) and x (6,)."""
-    left = (_LEFT @ np.append(-x, 1.0)) @ b
+    left = (_ERRORS - _LEFT @ x) @ b
     left *= left
     total: Floats = left[0] + left[1]
     return total

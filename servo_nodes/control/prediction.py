@@ -16,7 +16,7 @@ so `rigid` spells it out in plain numbers.
 
 from __future__ import annotations
 
-import bisect
+import collections
 import math
 import typing
 
@@ -25,7 +25,6 @@ import numpy as np
 from servo_nodes.values import SECOND_NS, Floats, Stamp
 
 HISTORY = 512
-_TRIM = 2 * HISTORY
 _CLOSEST = 0.1
 
 
@@ -54,20 +53,22 @@ def rigid(twist: typing.Sequence[float], duration: float) -> Floats:
 
 
 class Odometer:
-    """What the sent twists add up to; a twist holds until the next one is recorded."""
+    """What the sent twists add up to; a twist holds until the next one is recorded.
+
+    Kept as passages: the matrix that takes points of the camera's frame when the first twist was
+    recorded to its frame now. They are products of exact motions, orthonormal again now and then.
+    """
 
     def __init__(self) -> None:
-        self._times: list[Stamp] = []
-        self._poses: list[Floats] = []
-        self._twists: list[list[float]] = []
+        self._log: collections.deque[tuple[Stamp, Floats, list[float]]] = collections.deque(
+            maxlen=HISTORY)
         self._latest: tuple[Stamp, Floats] | None = None
         self._start: tuple[Stamp, Floats] | None = None
+        self._count = 0
 
     def clear(self) -> None:
         """Forget everything: the camera is taken to be at rest."""
-        self._times.clear()
-        self._poses.clear()
-        self._twists.clear()
+        self._log.clear()
         self._latest = self._start = None
 
     def record(self, twist: Floats, now: Stamp) -> None:
@@ -75,56 +76,51 @@ class Odometer:
 
         Time that runs backwards forgets the past.
         """
-        if self._times and now < self._times[-1]:
+        if self._log and now < self._log[-1][0]:
             self.clear()
-        pose = self._pose_now(now) if self._times else np.eye(4)
-        self._times.append(now)
-        self._poses.append(pose)
-        self._twists.append(twist.tolist())
-        if len(self._times) >= _TRIM:
-            self._trim()
+        passage = self._passage_now(now) if self._log else np.eye(4)
+        self._count += 1
+        if self._count % HISTORY == 0:
+            rotation = passage[:3, :3]
+            passage = passage.copy()
+            passage[:3, :3] = rotation @ (1.5 * np.eye(3) - 0.5 * rotation.T @ rotation)
+        self._log.append((now, passage, twist.tolist()))
 
-    def _trim(self) -> None:
-        """Keep the recent half, told from its own start, and orthonormal again."""
-        del self._times[:-HISTORY], self._poses[:-HISTORY], self._twists[:-HISTORY]
-        start = np.linalg.inv(self._poses[0])
-        self._poses[:] = [start @ pose for pose in self._poses]
-        for pose in self._poses:
-            rotation = pose[:3, :3]
-            pose[:3, :3] = rotation @ (1.5 * np.eye(3) - 0.5 * rotation.T @ rotation)
-        self._latest = self._start = None
+    def _passage_at(self, time: Stamp) -> Floats:
+        for start, passage, twist in reversed(self._log):
+            if start <= time:
+                break
+        else:
+            return passage
+        if start == time:
+            return passage
+        return rigid(twist, (start - time) / SECOND_NS) @ passage
 
-    def _pose_at(self, time: Stamp) -> Floats:
-        k = bisect.bisect_right(self._times, time) - 1
-        if k < 0:
-            return self._poses[0]
-        elapsed = (time - self._times[k]) / SECOND_NS
-        return self._poses[k] @ rigid(self._twists[k], elapsed) if elapsed else self._poses[k]
-
-    def _pose_now(self, now: Stamp) -> Floats:
-        """Return the pose at `now`; a decision and its record ask for the same moment."""
+    def _passage_now(self, now: Stamp) -> Floats:
+        """Return the passage at `now`; a decision and its record ask for the same moment."""
         if self._latest is None or self._latest[0] != now:
-            self._latest = now, self._pose_at(now)
+            self._latest = now, self._passage_at(now)
         return self._latest[1]
 
-    def motion(self, start: Stamp, end: Stamp) -> Floats | None:
-        """Return the pose (4, 4) of the camera at `end` in its frame at `start`; None at rest.
+    def passage(self, start: Stamp, end: Stamp) -> Floats | None:
+        """Return the matrix (4, 4) from the camera's frame at `start` to that at `end`.
 
-        What was recorded up to `start` must be complete: it is looked up once.
+        None for no motion. What was recorded up to `start` must be complete: it is looked up once.
         """
-        if not self._times or end <= start or end <= self._times[0]:
+        if not self._log or end <= start or end <= self._log[0][0]:
             return None
         if self._start is None or self._start[0] != start:
-            self._start = start, rigid_inverse(self._pose_at(start))
-        return self._start[1] @ self._pose_now(end)
+            self._start = start, _undone(self._passage_at(start))
+        return self._passage_now(end) @ self._start[1]
 
 
-def rigid_inverse(pose: Floats) -> Floats:
-    """Return the inverse (4, 4) of one motion (4, 4)."""
-    turned = np.eye(4)
-    turned[:3, :3] = pose[:3, :3].T
-    turned[:3, 3] = -(pose[:3, 3] @ pose[:3, :3])
-    return turned
+def _undone(passage: Floats) -> Floats:
+    back = np.zeros((4, 4))
+    turned = passage[:3, :3].T
+    back[:3, :3] = turned
+    back[:3, 3] = -(turned @ passage[:3, 3])
+    back[3, 3] = 1.0
+    return back
 
 
 def homogeneous(points_xy: Floats, depths: Floats) -> Floats:
@@ -136,20 +132,20 @@ def homogeneous(points_xy: Floats, depths: Floats) -> Floats:
     return rays
 
 
-def moved(rays: Floats, motion: Floats) -> tuple[Floats, Floats]:
-    """Return points (2, N), normalised, and 1/Z (N,), 1/m, after the camera went through `motion`.
+def moved(rays: Floats, passage: Floats) -> tuple[Floats, Floats]:
+    """Return points (2, N), normalised, and 1/Z (N,), 1/m, in the frame the passage leads to.
 
     Parameters
     ----------
     rays : (4, N), (x, y, 1, 1/Z) before
-    motion : (4, 4), pose of the camera afterwards in its frame before
+    passage : (4, 4), takes points of the camera's frame before to its frame afterwards
 
     A point that would come closer than a tenth of its depth keeps its old place: no prediction is
     better than one through the lens.
     """
-    seen = rigid_inverse(motion)[:3] @ rays
+    seen = passage[:3] @ rays
     ahead = seen[2]
-    if ahead.min() > _CLOSEST:
+    if np.minimum.reduce(ahead) > _CLOSEST:
         return seen[:2] / ahead, rays[3] / ahead
     fine = ahead > _CLOSEST
     factor = np.where(fine, ahead, 1.0)

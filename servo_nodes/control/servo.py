@@ -35,7 +35,8 @@ class Solution:
     error_px : float, px, root mean square distance of the points to the goal, weighted by w^2
     condition, smallest : float, of the weighted interaction matrix; inf and 0 without full rank
     points : int, number of points with weight
-    scatter : (6,), standard deviation of the camera pose for 1 px of noise in a coordinate, m, rad
+    scatter : (6,), standard deviation of the camera pose for 1 px of noise in a coordinate, m, rad,
+        when the view was first used
     points_xy : (N, 2), normalised, the points the twist was computed at (predicted to now)
     view_stamp : int, ns, stamp of the view it rests on
     gain : float, 1/s, in force
@@ -82,6 +83,7 @@ class Servo:
         self._sight: Sight | None = None
         self._judged: _Judged | None = None
         self._before: _Judged | None = None
+        self._scatter: Floats | None = None
         self._odometer = prediction.Odometer()
         self._depths = DepthMemory()
         self._drift = Drift()
@@ -118,20 +120,21 @@ class Servo:
         if before is not None and 0 < view.stamp - before.stamp < SECOND_NS:
             if settings.depth.observe and not (view.depths > 0).all():
                 self._learn_depths(before, view)
-        sight = sight_from_view(view, settings.depth, self._depths)
+        sight = sight_from_view(view, settings.depth, self._depths, before)
         if settings.target.moves and before is not None and len(sight):
             self._learn_drift(before, sight)
-        self._sight, self._before, self._judged = sight, self._judged, None
+        self._sight, self._before = sight, self._judged
+        self._judged = self._scatter = None
 
-    def _motion(self, start: Stamp, end: Stamp) -> Floats | None:
-        """Return how the camera moves from an image at `start` to one at `end`, (4, 4)."""
+    def _passage(self, start: Stamp, end: Stamp) -> Floats | None:
+        """Return the way from the frame of an image at `start` to that of one at `end`, (4, 4)."""
         lag = round(self.settings.prediction.delay * SECOND_NS)
-        return self._odometer.motion(start - lag, end - lag)
+        return self._odometer.passage(start - lag, end - lag)
 
     def _learn_depths(self, before: Sight, view: View) -> None:
-        moved = self._motion(before.stamp, view.stamp)
+        passage = self._passage(before.stamp, view.stamp)
         duration = (view.stamp - before.stamp) / SECOND_NS
-        twist = np.zeros(6) if moved is None else motion.log(moved) / duration
+        twist = np.zeros(6) if passage is None else -motion.log(passage) / duration
         finite = np.isfinite(view.points_xy).all(-1)
         self._depths.follow(before, view.points_xy[finite], view.ids[finite], twist, duration,
                             self.settings.depth)
@@ -141,9 +144,10 @@ class Servo:
         _, i, j = np.intersect1d(before.ids, sight.ids, return_indices=True)
         if len(i) < 3 or not 0 < duration < 1:
             return
-        moved = self._motion(before.stamp, sight.stamp)
-        rays = before.rays[:, i]
-        expected, inverse = (rays[:2], rays[3]) if moved is None else prediction.moved(rays, moved)
+        passage, rays = self._passage(before.stamp, sight.stamp), before.rays[:, i]
+        expected, inverse = rays[:2], rays[3]
+        if passage is not None:
+            expected, inverse = prediction.moved(rays, passage)
         stack = interaction.points(expected.T, 1 / inverse)
         rest = (expected.T - sight.xy[j]).reshape(-1)
         self._drift.update(least_squares.fit(stack, rest).x, duration,
@@ -151,17 +155,17 @@ class Servo:
 
     def _predicted(self, sight: Sight, now: Stamp) -> tuple[Floats, Floats]:
         """Return points (2, N) and 1/Z (N,), 1/m, where they will be when a decision acts."""
-        settings, moved = self.settings, None
+        settings, passage = self.settings, None
         if settings.prediction.enabled:
             lag = round(settings.prediction.delay * SECOND_NS)
-            moved = self._odometer.motion(sight.stamp - lag, now)
+            passage = self._odometer.passage(sight.stamp - lag, now)
             if settings.target.moves:
                 ahead = (now - sight.stamp + lag) / SECOND_NS
-                drifted = prediction.rigid((-self._drift.twist).tolist(), ahead)
-                moved = drifted if moved is None else moved @ drifted
-        if moved is None:
+                drifted = prediction.rigid(self._drift.twist.tolist(), ahead)
+                passage = drifted if passage is None else drifted @ passage
+        if passage is None:
             return sight.rays[:2], sight.rays[3]
-        return prediction.moved(sight.rays, moved)
+        return prediction.moved(sight.rays, passage)
 
     def solve(self, now: Stamp) -> Solution | None:
         """Return what the law asks for at `now`, ns; None without a camera or a usable point."""
@@ -171,12 +175,12 @@ class Servo:
         xy, inverse = self._predicted(sight, now)
         lead = self._guide.lead(xy, inverse, sight, now, settings, self._focal_px)
         here = normal.basis(xy, inverse, lead.goal_xy)
-        there = sight.goal_basis if lead.basis is None else lead.basis
+        there = lead.basis
         mean = normal.mean_basis(here, there)
         judged = self._judged or self._judge(mean, sight)
         chosen = self._chosen(here, there, mean)
         system = normal.system(chosen, judged.squares)
-        square = system[6, 6] if lead.twist is None else _squared_error(xy, sight, judged.squares)
+        square = float(system[6, 6]) if lead.twist is None else _squared_error(xy, sight, judged.squares)
         error_px = self._focal_px * math.sqrt(max(square, 0.0) / judged.total)
         gain = gain_at(error_px, settings)
         fit = self._fit(system, chosen, judged)
@@ -185,10 +189,12 @@ class Servo:
         else:
             twist = law.twists(xy.T, lead.goal_xy.T, 1 / inverse, 1 / lead.goal_inverse, settings,
                                weights=judged.weights, gain=gain)
+        if self._scatter is None:
+            self._scatter = _spread(fit.scatter, settings.axes) / self._focal_px
         smallest = float(fit.values[0])
         condition = float(fit.values[-1]) / smallest if smallest > 0 else math.inf
         return Solution(self._shaped(twist, lead, now), error_px, condition, smallest,
-                        judged.count, _spread(fit.scatter, settings.axes) / self._focal_px,
+                        judged.count, self._scatter,
                         xy.T, sight.stamp, gain, lead.left, lead.refusal)
 
     def _chosen(self, here: Floats, there: Floats, mean: Floats) -> Floats:
@@ -231,7 +237,7 @@ class Servo:
             before=before.factors if before is not None and known else None)
         trust = sight.trust * factors
         squares = trust * trust
-        self._judged = _Judged(sight.ids, factors, trust, squares, float(squares.sum()),
+        self._judged = _Judged(sight.ids, factors, trust, squares, float(np.add.reduce(squares)),
                                int(np.count_nonzero(trust)))
         return self._judged
 
@@ -253,7 +259,7 @@ def _with_error_of(basis: Floats, other: Floats) -> Floats:
 
 
 def _squared_error(xy: Floats, sight: Sight, squares: Floats) -> float:
-    away = xy - sight.goal_rays[:2]
+    away = xy - sight.goal.xy
     return float(squares @ (away * away).sum(0))
 
 

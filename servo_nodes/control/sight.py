@@ -9,6 +9,7 @@ with the camera; the goal; a constant.
 from __future__ import annotations
 
 import functools
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -19,6 +20,22 @@ from servo_nodes.control.law_settings import DepthSettings
 from servo_nodes.values import Floats, Stamp, View
 
 Ids = npt.NDArray[np.uint32]
+
+
+@dataclass(frozen=True, eq=False)
+class Goal:
+    """The goal's points as columns.
+
+    Attributes
+    ----------
+    xy : (2, N), normalised
+    inverse : (N,), 1/Z, 1/m
+    basis : (10, N), of the normal equations
+    """
+
+    xy: Floats
+    inverse: Floats
+    basis: Floats
 
 
 @dataclass(frozen=True, eq=False)
@@ -51,33 +68,49 @@ class Sight:
         return prediction.homogeneous(self.xy, self.depths)
 
     @functools.cached_property
-    def goal_rays(self) -> Floats:
-        """Return (x, y, 1, 1/Z), (4, N), in the goal."""
-        return prediction.homogeneous(self.goal_xy, self.goal_depths)
+    def goal(self) -> Goal:
+        """Return the goal's points in the form the live loop needs."""
+        rays = prediction.homogeneous(self.goal_xy, self.goal_depths)
+        return Goal(rays[:2], rays[3], normal.basis(rays[:2], rays[3], rays[:2]))
 
-    @functools.cached_property
-    def goal_basis(self) -> Floats:
-        """Return the basis (10, N) of the normal equations at the goal."""
-        return normal.basis(self.goal_rays[:2], self.goal_rays[3], self.goal_rays[:2])
+    def share_goal(self, other: Sight) -> None:
+        """Take over what `other` made of the goal when it is the same."""
+        if 'goal' in other.__dict__ and all(
+                getattr(self, name).tobytes() == getattr(other, name).tobytes()
+                for name in ('goal_xy', 'goal_depths')):
+            self.__dict__['goal'] = other.goal
 
 
-def sight_from_view(view: View, settings: DepthSettings, memory: DepthMemory) -> Sight:
-    """Return what the law can use of `view`; possibly nothing."""
-    numbers = np.concatenate([view.points_xy, view.goal_xy], axis=-1)
-    usable = np.isfinite(numbers).all(-1) & (view.weights > 0)
+def sight_from_view(view: View, settings: DepthSettings, memory: DepthMemory,
+                    before: Sight | None = None) -> Sight:
+    """Return what the law can use of `view`; possibly nothing.
+
+    Sums and extremes find out at once that nothing is missing, which is the rule.
+    """
     xy, goal_xy, trust, ids = view.points_xy, view.goal_xy, view.weights, view.ids
     depths, goal_depths = view.depths, view.goal_depths
-    if not usable.all():
+    if not (len(ids) and math.isfinite(
+            float(np.add.reduce(xy, None) + np.add.reduce(goal_xy, None)))
+            and np.minimum.reduce(trust) > 0):
+        usable = np.isfinite(xy).all(-1) & np.isfinite(goal_xy).all(-1) & (trust > 0)
         xy, goal_xy, trust, ids = xy[usable], goal_xy[usable], trust[usable], ids[usable]
         depths, goal_depths = depths[usable], goal_depths[usable]
-    known = (goal_depths > 0) & (goal_depths < np.inf)
-    if not known.all():
+    if not _all_known(goal_depths):
+        known = (goal_depths > 0) & (goal_depths < np.inf)
         goal_depths = np.where(known, goal_depths, settings.fallback)
-    known = (depths > 0) & (depths < np.inf)
-    if not known.all():
+    if not _all_known(depths):
+        known = (depths > 0) & (depths < np.inf)
         guess = memory.depths_of(ids, goal_depths) if settings.observe else goal_depths
         depths = np.where(known, depths, guess)
-    return Sight(view.stamp, xy, goal_xy, depths, goal_depths, np.minimum(trust, 1.0), ids)
+    sight = Sight(view.stamp, xy, goal_xy, depths, goal_depths, np.minimum(trust, 1.0), ids)
+    if before is not None:
+        sight.share_goal(before)
+    return sight
+
+
+def _all_known(depths: Floats) -> bool:
+    return bool(len(depths) and np.minimum.reduce(depths) > 0
+                and np.maximum.reduce(depths) < np.inf)
 
 
 class DepthMemory:

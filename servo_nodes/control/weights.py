@@ -33,7 +33,7 @@ LEAST_POINTS = 6
 _ABSOLUTE_ROUNDS = 4
 _ROUNDS = 2
 _MANY_POINTS = 12
-_HARDLY = 0.2
+_HARDLY = 0.5
 
 
 def huber(squares: Floats) -> Floats:
@@ -68,8 +68,10 @@ def of_points(basis: Floats, trust: Floats, *, estimator: str, floor: float,
         return np.ones(count)
     if before is not None and count >= _MANY_POINTS:
         weights = _round(basis, trust * before, estimator, floor)
-        if weights is not None and float(np.abs(weights - before).max()) < _HARDLY:
-            return weights
+        if weights is not None:
+            change = weights - before
+            if np.maximum.reduce(np.abs(change)) < _HARDLY:
+                return weights
     weights = np.ones(count)
     for _ in range(_ABSOLUTE_ROUNDS):
         squares = _squared_residuals(basis, trust * weights)

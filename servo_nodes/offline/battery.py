@@ -2,11 +2,12 @@
 # SPDX-License-Identifier: Apache-2.0
 """The task battery on which the laws are compared, with exact motion and nothing else.
 
-Four canonical tasks and what is measured on them follow Gans, Hutchinson & Corke (ICRA 2002, IJRR
-2003, from memory): a roll about the optical axis, an approach along it, a turn of the target's
-plane, and a general motion; samples until the points are home, largest excursions of the points and
-of the camera. The camera obeys at once and exactly, depths are true, there are no caps: it is the law
-alone that is seen. The target is a square of 0.2 m, its goal 0.5 m straight ahead.
+Four canonical tasks and what is measured on them follow Gans, Hutchinson & Corke (ICRA 2002,
+IJRR 2003, from memory): a roll about the optical axis, an approach along it, a turn of the
+target's plane, and a general motion; samples until the points are home, largest excursions of
+the points and of the camera. The camera obeys at once and exactly, depths are true, there are no
+caps: it is the law alone that is seen. The target is a square of 0.2 m, its goal 0.5 m straight
+ahead.
 """
 
 from __future__ import annotations
@@ -143,8 +144,8 @@ def run(begin: Floats, settings: law.LawSettings, *, goal: Floats | None = None,
     return [_outcome(traces[:, k], str(stopped[k]), now[k]) for k in range(len(now))]
 
 
-def _stop(stopped: npt.NDArray[np.str_], which: npt.NDArray[np.bool_], why: str) -> None:
-    stopped[which & (stopped == '')] = why
+def _stop(stopped: npt.NDArray[np.str_], which: npt.ArrayLike, why: str) -> None:
+    stopped[np.asarray(which) & (stopped == '')] = why
 
 
 def _trace(xy: Floats, goal_xy: Floats, now: Floats, goal: Floats) -> Floats:

@@ -2,9 +2,9 @@
 # SPDX-License-Identifier: Apache-2.0
 """The laws in closed loop with exact motion: published behaviour, closed forms, spurious ends.
 
-Numbers of the battery (after Gans, Hutchinson & Corke 2002) and of the golden runs were made with
-two formulations of the rigid motion (closed form and `scipy.linalg.expm`); closed forms are our own
-derivations, verified by simulation and SymPy.
+Numbers of the battery (after Gans, Hutchinson & Corke 2002) and of the golden runs were made
+with two formulations of the rigid motion (closed form and `scipy.linalg.expm`); closed forms are
+our own derivations, verified by simulation and SymPy.
 """
 
 from __future__ import annotations
@@ -37,7 +37,8 @@ def vector_deg(T):
 
 
 TABLE = {
-    'roll': [(297, 0.06186925, 141.4214, 0.2117047, 90), (292, 0.05523425, 212.3573, 0.1670203, 90),
+    'roll': [(297, 0.06186925, 141.4214, 0.2117047, 90),
+             (292, 0.05523425, 212.3573, 0.1670203, 90),
              (297, 0.06164703, 141.4214, 0, 90), (315, 0.08811414, 141.4214, 0, 90)],
     'advance': [(245, 0.02156476, 141.3998, 0.5, 0), (330, 0.1207722, 141.3006, 0.5, 0),
                 (288, 0.05117862, 141.3702, 0.5, 0), (273, 0.03801841, 141.3833, 0.5, 0)],
@@ -264,7 +265,8 @@ def test_three_points_decay_exactly_and_end_at_a_wrong_pose():
     corners, start = battery.square()[:3], battery.TASKS[3].pose
     settings = replace(BARE, interaction='current')
     tau = battery.run(start[None], settings, corners=corners, step=0.002, samples=1000)[0].end
-    np.testing.assert_allclose(vector_deg(tau), (8.630620204, -24.23850728, 3.104835986), atol=0.04)
+    np.testing.assert_allclose(vector_deg(tau), (8.630620204, -24.23850728, 3.104835986),
+                               atol=0.04)
     np.testing.assert_allclose(tau[:3, 3], (0.02147331369, 0.0001713634781, 0.5289338681),
                                atol=4e-4)
     end = battery.run(start[None], settings, corners=corners, step=0.1, samples=1000)[0].end

@@ -2,8 +2,8 @@
 # SPDX-License-Identifier: Apache-2.0
 """Interaction matrices against published entries, OpenCV, Pinocchio and exact finite motion.
 
-Numbers are recomputed from the formulas of Chaumette & Hutchinson 2006, Malis et al. 1999, Iwatsuki
-& Okiyama 2005 and Chaumette 2004 with SymPy, SciPy and OpenCV.
+Numbers are recomputed from the formulas of Chaumette & Hutchinson 2006, Malis et al. 1999,
+Iwatsuki & Okiyama 2005 and Chaumette 2004 with SymPy, SciPy and OpenCV.
 """
 
 from __future__ import annotations
@@ -228,7 +228,8 @@ def test_normalised_moments_decouple_translation():
     rows = moments.normalised_rows(found, 0.8, 0.1, 0.5)
     np.testing.assert_allclose(rows[:, :3], -0.966736489 * np.eye(3), atol=1e-8)
     np.testing.assert_allclose(rows[:, 3:], [
-        [-0.01097648722, -0.7738926998, 0.1192308336], [0.7751816818, 0.01097648722, -0.1450104734],
+        [-0.01097648722, -0.7738926998, 0.1192308336],
+        [0.7751816818, 0.01097648722, -0.1450104734],
         [-0.1788462505, 0.21751571, 0]], atol=1e-8)
 
 

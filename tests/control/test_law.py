@@ -171,7 +171,8 @@ def test_least_squares_are_those_of_numpy_for_any_rank(seed, rows, columns):
     if rng.random() < 0.5:
         stack[1, :, 0] = stack[1, :, -1]
     right = rng.normal(size=(3, rows))
-    expected = np.array([np.linalg.lstsq(a, b, rcond=1e-9)[0] for a, b in zip(stack, right)])
+    expected = np.array([np.linalg.lstsq(a, b, rcond=1e-9)[0]
+                         for a, b in zip(stack, right, strict=True)])
     scale = 1 + np.abs(expected).max()
     np.testing.assert_allclose(least_squares.fits(stack, right) / scale, expected / scale,
                                atol=1e-9)
@@ -196,7 +197,8 @@ def test_what_is_not_finite_stays_visible_and_spoils_no_neighbour():
 
 def test_the_partitioned_law_reads_advance_and_roll_from_the_pattern():
     """PART: square, roll 50 degrees, Z = 0.8, goal 0.5: vz = ln 1.6, wz = alpha - alpha*."""
-    start = motion.pose_from_parts(motion.rotation_from_vector(np.radians([0, 0, 50])), (0, 0, 0.8))
+    turned = motion.rotation_from_vector(np.radians([0, 0, 50]))
+    start = motion.pose_from_parts(turned, (0, 0, 0.8))
     twist = asked(start, LawSettings(kind='partitioned'), gain=1.0)
     np.testing.assert_allclose(twist, [0, 0, 0.4700036292, 0, 0, 0.872664626], atol=1e-9)
 
@@ -215,7 +217,7 @@ def test_the_pose_law_has_the_published_twist():
 @pytest.mark.parametrize('kind', ['hybrid', 'pose'])
 def test_pose_and_hybrid_shrink_by_one_e_in_one_time_constant(kind):
     """Their features decay exponentially; HYB with the middle of the pattern on the axis."""
-    start = motion.inverse(motion.exp(np.array([0.1, -0.05, -0.2, 0.2, -0.3, 0.5]))) @ battery.home()
+    start = motion.exp(-np.array([0.1, -0.05, -0.2, 0.2, -0.3, 0.5])) @ battery.home()
     step, now = 1 / 800, start
     for _ in range(400):
         now = motion.exp(-step * asked(now, LawSettings(kind=kind), gain=2.0)) @ now

@@ -231,7 +231,7 @@ def test_weights_never_vote_among_fewer_than_six_points():
 
 
 def test_the_start_is_smooth_and_follows_the_published_curve():
-    """SS (Mansard & Chaumette 2007): gain 0.5, rate 5; sideways, so that the matrix is constant."""
+    """SS (Mansard & Chaumette 2007): gain 0.5, rate 5; sideways: the matrix is constant."""
     start = motion.pose_from_parts(np.eye(3), (0.05, 0, 0.5))
     servo = ready(replace(PLAIN, start_rate=5.0))
     servo.begin(0)
@@ -296,12 +296,13 @@ def test_the_odometer_adds_up_what_was_sent(twists, first, last):
     odometer = prediction.Odometer()
     for k, twist in enumerate(twists):
         odometer.record(twist, k * 10 * MS)
-    moved = odometer.motion(first * MS, last * MS)
+    moved = odometer.passage(first * MS, last * MS)
     expected = np.eye(4)
     for t in range(first, max(first, last)):
         k = min(t // 10, len(twists) - 1)
         expected = expected @ motion.exp(twists[k] * 0.001)
-    np.testing.assert_allclose(np.eye(4) if moved is None else moved, expected, atol=1e-9)
+    found = np.eye(4) if moved is None else np.linalg.inv(moved)
+    np.testing.assert_allclose(found, expected, atol=1e-9)
 
 
 def test_the_odometer_stays_exact_over_many_ticks_and_forgets_when_time_runs_back():
@@ -309,15 +310,15 @@ def test_the_odometer_stays_exact_over_many_ticks_and_forgets_when_time_runs_bac
     twist = np.array([0.1, 0.0, 0.02, 0.1, -0.2, 0.5])
     for k in range(5000):
         odometer.record(twist, k * 10 * MS)
-    moved = odometer.motion(49_800 * MS, 50_000 * MS)
-    np.testing.assert_allclose(moved, motion.exp(0.2 * twist), atol=1e-12)
+    moved = odometer.passage(49_800 * MS, 50_000 * MS)
+    np.testing.assert_allclose(moved, motion.exp(-0.2 * twist), atol=1e-12)
     odometer.record(twist, 10 * MS)
-    assert odometer.motion(0, 5 * MS) is None
+    assert odometer.passage(0, 5 * MS) is None
 
 
 def test_a_point_that_prediction_would_put_behind_the_camera_stays():
     rays = prediction.homogeneous(np.array([[0.1, 0.0], [0.0, 0.0]]), np.array([0.5, 0.05]))
-    xy, inverse = prediction.moved(rays, motion.exp([0, 0, 0.1, 0, 0, 0]))
+    xy, inverse = prediction.moved(rays, motion.exp([0, 0, -0.1, 0, 0, 0]))
     np.testing.assert_allclose(xy[:, 1], 0)
     assert inverse[1] == pytest.approx(20)
     np.testing.assert_allclose(xy[:, 0], [0.125, 0])

@@ -59,9 +59,10 @@ def test_the_motions_in_a_homography_are_opencvs():
     """HOM: four motions, two of them with the plane ahead; order is free."""
     rotations, shifts, normals = two_views.motions_from_homography(H)
     count, cv_r, cv_t, cv_n = cv2.decomposeHomographyMat(H, np.eye(3))
-    theirs = [np.concatenate([np.ravel(x) for x in part]) for part in zip(cv_r, cv_t, cv_n)]
+    theirs = [np.concatenate([np.ravel(x) for x in part])
+              for part in zip(cv_r, cv_t, cv_n, strict=True)]
     ours = [np.concatenate([np.ravel(x) for x in part])
-            for part in zip(rotations, shifts, normals)]
+            for part in zip(rotations, shifts, normals, strict=True)]
     assert count == len(ours) == 4
     for one in theirs:
         assert min(np.abs(one - other).max() for other in ours) < 1e-8
