@@ -44,13 +44,21 @@ class Observer:
         self._rig, self._controller = rig, controller
         self.commands: list[Received] = []
         self.states: list[tuple[Stamp, str, dict[str, str]]] = []
-        rig.node.create_subscription(
-            TwistStamped, command, self._take,
-            QoSProfile(depth=1000, reliability=ReliabilityPolicy.RELIABLE))
+        self._command = command
+        self._ear: typing.Any = None
+        self.listen(True)
         rig.node.create_subscription(
             DiagnosticStatus, f'{controller}/state', self._take_state,
             QoSProfile(depth=100, reliability=ReliabilityPolicy.RELIABLE,
                        durability=DurabilityPolicy.TRANSIENT_LOCAL))
+
+    def listen(self, on: bool) -> None:
+        """Subscribe to the command, or take the subscription back."""
+        if self._ear is not None:
+            self._rig.node.destroy_subscription(self._ear)
+        self._ear = self._rig.node.create_subscription(
+            TwistStamped, self._command, self._take,
+            QoSProfile(depth=1000, reliability=ReliabilityPolicy.RELIABLE)) if on else None
 
     @property
     def state(self) -> str:

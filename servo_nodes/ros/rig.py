@@ -60,12 +60,13 @@ class Child:
     env : mapping, the environment
     log : path of the file
     arguments : ROS arguments after `--ros-args`
+    code : str, what to run instead of the node's `main`
     """
 
     def __init__(self, node: str, env: Mapping[str, str], log: pathlib.Path,
-                 arguments: Sequence[str] = ()) -> None:
+                 arguments: Sequence[str] = (), code: str = '') -> None:
         self.node, self.log = node, log
-        code = f'from servo_nodes.ros.{node}_node import main; main()'
+        code = code or f'from servo_nodes.ros.{node}_node import main; main()'
         with log.open('ab') as file:
             self._process = subprocess.Popen(
                 [sys.executable, '-c', code, '--ros-args', *arguments], env=dict(env),
@@ -146,15 +147,17 @@ class Rig:
 
     def start(self, node: str, *, namespace: str = NAMESPACE,
               remap: Mapping[str, str] | None = None, arguments: Sequence[str] = (),
-              env: Mapping[str, str] | None = None, **parameters: object) -> Child:
-        """Start a node; parameters are given with `__` for each dot."""
+              env: Mapping[str, str] | None = None, code: str = '',
+              **parameters: object) -> Child:
+        """Start a node, or `code` under its name; `__` stands for each dot of a parameter."""
         given = ['-r', f'__ns:={namespace}']
         for old, new in (remap or {}).items():
             given += ['-r', f'{old}:={new}']
         for name, value in parameters.items():
             given += ['-p', f'{name.replace("__", ".")}:={_written(value)}']
         log = self.folder / f'{node}_{len(self.children)}.log'
-        child = Child(node, {**self._env, **(env or {})}, log, [*given, *arguments])
+        child = Child(node, {**self._env, **(env or {})}, log,
+                      [*given, *arguments], code)
         self.children.append(child)
         return child
 

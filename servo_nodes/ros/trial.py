@@ -26,20 +26,22 @@ class Trial:
     controller, tracker, simulator : parameters of the nodes, `__` for each dot
     remap : mapping of node to its remaps
     env : mapping of node to additions to its environment
+    code : mapping of node to what runs in its place
     """
 
     def __init__(self, rig: Rig, *, controller: Mapping[str, object] | None = None,
                  tracker: Mapping[str, object] | None = None,
                  simulator: Mapping[str, object] | None = None,
                  remap: Mapping[str, Mapping[str, str]] | None = None,
-                 env: Mapping[str, Mapping[str, str]] | None = None) -> None:
+                 env: Mapping[str, Mapping[str, str]] | None = None,
+                 code: Mapping[str, str] | None = None) -> None:
         self.rig = rig
         self._given: dict[str, dict[str, typing.Any]] = {
             'simulator': dict(simulator or {}),
             'tracker': {'goal__folder': str(rig.folder / 'goal'),
                         'teach__distance': HOME_DISTANCE, **(tracker or {})},
             'controller': dict(controller or {})}
-        self._remap, self._env = remap or {}, env or {}
+        self._remap, self._env, self._code = remap or {}, env or {}, code or {}
         self.observer = Observer(rig)
         self.nodes: dict[str, Child] = {}
         for node in self._given:
@@ -48,7 +50,7 @@ class Trial:
     def start(self, node: str) -> Child:
         """Start a node, or start it again as it was."""
         child = self.rig.start(node, remap=self._remap.get(node), env=self._env.get(node),
-                               **self._given[node])
+                               code=self._code.get(node, ''), **self._given[node])
         self.nodes[node] = child
         return child
 
