@@ -280,8 +280,6 @@ def _solved_2x2(matrix: Floats, right: Floats) -> Floats:
 def _without_zero_tail(model: str, d: tuple[float, ...]) -> tuple[float, ...]:
     """Return `d` at a length its model knows: drivers pad with zeros, or send none at all."""
     lengths = MODELS.get(model, (len(d),))
-    if len(d) in lengths:
-        return d
     longest = max(lengths)
     if len(d) > longest and not any(d[longest:]):
         return d[:longest]

@@ -51,6 +51,13 @@ def test_views_come_back_in_single_precision(messages, count):
     assert_array_equal(back.ids, sent.ids)
 
 
+def test_an_empty_cloud_says_nothing_seen_whatever_its_fields(messages):
+    message = messages.PointCloud2()
+    message.header.stamp.sec, message.header.frame_id = 3, 'eye'
+    view = wire.view_from_cloud(message)
+    assert (len(view), view.stamp, view.frame_id) == (0, 3_000_000_000, 'eye')
+
+
 def test_viewers_find_the_points_in_space_and_nan_where_depth_is_unknown(messages):
     sent = some_view(6)
     message = cloud_of(messages, sent)
