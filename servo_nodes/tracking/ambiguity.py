@@ -24,7 +24,7 @@ _THRESHOLD_PX, _CELL_PX, _PEAKS, _LEAST_PAIRS = 3.0, 8, 3, 12
 
 def alike_elsewhere(reference: Reference, describer: Describer, limits: Limits,
                     least: int) -> int:
-    """Return how many points of a goal, at least `least`, are also found elsewhere in its view."""
+    """Return how many points of a goal, `least` or more, are also found elsewhere in it."""
     camera, view = reference.goal.camera, reference.goal.view
     keypoints = reference.keypoints
     first, second = describer.match_elsewhere(keypoints, APART_PX)

@@ -29,8 +29,8 @@ from servo_nodes.values import Floats
 _cv: typing.Any = cv2
 Index = npt.NDArray[np.intp]
 
-WINDOW, LEVELS = (15, 15), 3
-_STOP = (_cv.TERM_CRITERIA_COUNT | _cv.TERM_CRITERIA_EPS, 12, 0.03)
+WINDOW, LEVELS = (21, 21), 3
+_STOP = (_cv.TERM_CRITERIA_COUNT | _cv.TERM_CRITERIA_EPS, 20, 0.01)
 _MOST_RETURN_PX, _AGREE_PX, _LEAST_CARRIED = 0.5, 2.0, 6
 _FLOOR_PX = 0.03
 

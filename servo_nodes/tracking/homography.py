@@ -30,6 +30,8 @@ TUKEY = 4.685
 # The median of |e| for two independent Gaussian components of scale 1 (Rayleigh): sqrt(2 ln 2).
 _RAYLEIGH_MEDIAN = 1.17741
 _LEAST_BELOW = 1e-12
+# The residual of a point behind the camera: beyond any other, and finite.
+_NOWHERE = 1e6
 
 
 @dataclass(frozen=True, eq=False)
@@ -142,7 +144,7 @@ def _weighed(matrix: Floats, goal_xy: Floats, xy: Floats,
              floor: float) -> tuple[Floats, Floats, float]:
     difference = mapped(matrix, goal_xy) - xy
     residuals = np.hypot(difference[:, 0], difference[:, 1])
-    residuals[np.isnan(residuals)] = np.inf
+    residuals[np.isnan(residuals)] = _NOWHERE
     scale = max(middle(residuals) / _RAYLEIGH_MEDIAN, floor)
     u = np.minimum(residuals / (TUKEY * scale), 1.0)
     return (1 - u * u) ** 2, residuals, scale

@@ -29,6 +29,7 @@ from servo_nodes.values import Floats
 AXES = ('x', 'y', 'z', 'rx', 'ry', 'rz')
 MOST_SATURATED, LEAST_SPREAD = 0.2, 0.08
 MOST_BLUR, MOST_SCATTER, MOST_TURN = 0.93, 5e-4, np.radians(0.05)
+REPEATS_SHARE = 0.5
 HOPELESS_SCATTER, HOPELESS_TURN = 5e-3, np.radians(0.5)
 _LAPLACIAN = np.array([[1, -2, 1], [-2, 4, -2], [1, -2, 1]], dtype=np.float32)
 _MAD = 1.482602219
@@ -55,8 +56,8 @@ class Evidence:
 
 
 def judged(goal: Goal, evidence: Evidence, *, least_points: int,
-           alike_elsewhere: int | None) -> Verdict:
-    """Judge a view; `alike_elsewhere` None (markers) leaves out sharpness and repetition."""
+           elsewhere: int | None) -> Verdict:
+    """Judge a view; `elsewhere` None (markers) leaves out sharpness and repetition."""
     view = goal.view
     noise = noise_of(view)
     saturated = float(np.mean((view <= 1) | (view >= 254)))
@@ -86,15 +87,19 @@ def judged(goal: Goal, evidence: Evidence, *, least_points: int,
         warnings.append(f'{saturated:.0%} of the view is black or white: change the exposure')
     if spread < LEAST_SPREAD:
         warnings.append('the points crowd in a small part of the view')
-    if alike_elsewhere is not None:
+    if elsewhere is not None:
         blur = blur_of(view)
         figures['blur'] = round(blur, 3)
         if blur > MOST_BLUR:
             warnings.append('the view is not sharp')
-        figures['alike_elsewhere'] = alike_elsewhere
-        if alike_elsewhere:
-            return Verdict(f'the view repeats itself: {alike_elsewhere} points are also found '
-                           'elsewhere in it, so another place could be taken for the goal',
+        figures['alike_elsewhere'] = elsewhere
+        words = f'{elsewhere} points of the view are also found elsewhere in it'
+        repeats = elsewhere >= REPEATS_SHARE * len(evidence.uv)
+        if elsewhere and not repeats:
+            warnings.append(f'parts repeat: {words}')
+        elif elsewhere:
+            return Verdict(f'the view repeats itself: {words}, so that another place '
+                           'could be taken for the goal',
                            (), figures)
     return Verdict('', tuple(warnings), figures)
 

@@ -98,7 +98,7 @@ def _verdict(goal: Goal, settings: TrackerSettings) -> tuple[judge.Verdict, int]
         scatter = np.full(len(found), CORNER_FLOOR_PX / judge.noise_of(_grey(goal)))
         evidence = judge.Evidence(found.uv, found.xy, found.depths, scatter)
         return judge.judged(goal, evidence, least_points=_LEAST_MARKER_POINTS,
-                            alike_elsewhere=None), len(found)
+                            elsewhere=None), len(found)
     describer = Describer(settings.detector.kind, settings.detector.features)
     reference = Reference(goal, points=settings.detector.points, describer=describer)
     evidence = judge.Evidence(reference.uv, reference.xy, reference.depths,
@@ -106,7 +106,7 @@ def _verdict(goal: Goal, settings: TrackerSettings) -> tuple[judge.Verdict, int]
     limits = Limits(settings.follow.likeness, settings.follow.residual_px)
     alike = alike_elsewhere(reference, describer, limits, settings.consensus.acquire_points)
     return judge.judged(goal, evidence, least_points=settings.teach.least_points,
-                        alike_elsewhere=alike), len(reference)
+                        elsewhere=alike), len(reference)
 
 
 def _grey(goal: Goal) -> Grey:

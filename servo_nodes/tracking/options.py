@@ -66,9 +66,6 @@ class MarkerOptions(Checked):
 class ConsensusOptions(Checked):
     """When points agree well enough to be believed."""
 
-    kind: str = setting('auto', choices=('auto', 'plane', 'relief'),
-                        help='plane: one homography. relief: epipolar geometry, for castings and '
-                        'the like. auto: a plane unless the points contradict it.')
     threshold_px: float = setting(
         3.0, unit='px', low=0.3, high=20.0,
         help='Distance from the model within which a keypoint agrees while searching.')

@@ -107,7 +107,8 @@ class Patches:
             Likeness -1 where a patch leaves the image, or its step or gain is senseless.
         """
         good = _inside(grey.shape, uv, local)
-        solver = self._solver.take(index, axis=0)
+        # Usually all are wanted: then nothing is copied.
+        solver = self._solver if len(index) == len(self) else self._solver[index]
         first = at = np.where(good[:, None], uv, RADIUS)
         # One product makes all sampling positions: rows u then v of (A | u) times (o, 1).
         place = np.empty((2, len(at), 3), np.float32)

@@ -172,5 +172,5 @@ def test_points_without_depth_have_no_predictable_scatter() -> None:
                 np.array([0, 0, 1, 0.4]))
     spread = judge.Evidence(np.random.default_rng(0).uniform(0, 480, (40, 2)),
                             np.zeros((40, 2)), np.full(40, np.nan), np.ones(40))
-    verdict = judge.judged(goal, spread, least_points=30, alike_elsewhere=None)
+    verdict = judge.judged(goal, spread, least_points=30, elsewhere=None)
     assert 'the pose would scatter' in verdict.refusal
