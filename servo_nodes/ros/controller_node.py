@@ -20,7 +20,7 @@ from servo_nodes.control.states import ENGAGED
 from servo_nodes.ros.diagnostics import OK, WARN
 from servo_nodes.ros.inputs import Inputs
 from servo_nodes.ros.options import ControllerNodeSettings
-from servo_nodes.ros.pacer import Pacer
+from servo_nodes.ros.pacer import Pacer, raise_priority
 from servo_nodes.ros.reporter import Reporter
 from servo_nodes.ros.shell import Shell, pause, run
 from servo_nodes.values import Answer, Stamp, Twist
@@ -52,6 +52,9 @@ class ControllerNode(Shell):
 
     def activate(self) -> str:
         """Start deciding, from standby."""
+        refusal = raise_priority(self.parameters[ControllerNodeSettings].priority)
+        if refusal:
+            self.get_logger().info(refusal)
         self.reporter.begin()
         self._pacer = Pacer(self.controller.settings.rate, self._tick, self.fail, 'control')
         self._pacer.start()

@@ -115,7 +115,7 @@ class Bench:
         node_env: dict[str, str] = {}
         if faketime is not None:
             node_env = {'LD_PRELOAD': str(faketime), 'FAKETIME_TIMESTAMP_FILE': str(self.offset),
-                        'FAKETIME_NO_CACHE': '1', 'DONT_FAKE_MONOTONIC': '1',
+                        'FAKETIME_CACHE_DURATION': '1', 'DONT_FAKE_MONOTONIC': '1',
                         'FAKETIME_DONT_FAKE_MONOTONIC': '1'}
         follow = {'use_sim_time': True} if simulated_time else {}
         self.relay = Relay(rig)

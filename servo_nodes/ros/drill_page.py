@@ -37,9 +37,9 @@ def page(results: Sequence[Mapping[str, object]]) -> str:
 <html lang="en"><head><meta charset="utf-8"><title>Fault drill</title>
 <style>{STYLE}</style></head><body><h1>Fault drill</h1>
 <p class="{'bad' if bad else 'good'}">{verdict}; {skipped} not run.</p>
-<p>Each fault was injected into a moving loop of real processes. The worst figure of all runs counts;
-it was measured at a subscriber in another process, from the last good message or from the fault to
-exact zero, unless the reaction says otherwise.</p>
+<p>Each fault was injected into a moving loop of real processes. The worst figure of all runs
+counts; it was measured at a subscriber in another process, from the last good message or from the
+fault to exact zero, unless the reaction says otherwise.</p>
 <table><thead><tr><th>row</th><th>fault</th><th>reaction</th><th>worst</th><th>bound</th><th></th>
 <th>runs</th><th>verdict</th></tr></thead><tbody>
 {rows}

@@ -44,7 +44,7 @@ def tracker_dies(bench: Bench, run: int) -> Measured:
 def camera_stops(bench: Bench, run: int) -> Measured:
     """Freeze the simulator: no image, no arm."""
     bench.trial.nodes['simulator'].send(signal.SIGSTOP)
-    time.sleep(0.05)
+    bench.rig.watch(0.05)
     return bench.stopped(bench.relay.last_good, ('features_silent', 'image_silent'))
 
 
@@ -54,7 +54,7 @@ def system_clock(bench: Bench, run: int) -> Measured:
 
     def jump() -> None:
         bench.offset.write_text(f'{step:+d}\n')
-    measured = bench.steady(1.5, during=jump)
+    measured = bench.steady(2.5, during=jump)
     bench.offset.write_text('+0\n')
     return measured
 
@@ -63,7 +63,7 @@ def paused_time(bench: Bench, run: int) -> Measured:
     """Stop /clock, with the camera; when both go on, so does the loop."""
     simulator = bench.trial.nodes['simulator']
     simulator.send(signal.SIGSTOP)
-    time.sleep(0.05)
+    bench.rig.watch(0.05)
     measured = bench.stopped(bench.relay.last_good, ('features_silent', 'image_silent'))
     simulator.send(signal.SIGCONT)
     try:

@@ -47,7 +47,7 @@ class Observer:
         self._command = command
         self._ear: typing.Any = None
         self.listen(True)
-        rig.node.create_subscription(
+        rig.ear.create_subscription(
             DiagnosticStatus, f'{controller}/state', self._take_state,
             QoSProfile(depth=100, reliability=ReliabilityPolicy.RELIABLE,
                        durability=DurabilityPolicy.TRANSIENT_LOCAL))
@@ -55,8 +55,8 @@ class Observer:
     def listen(self, on: bool) -> None:
         """Subscribe to the command, or take the subscription back."""
         if self._ear is not None:
-            self._rig.node.destroy_subscription(self._ear)
-        self._ear = self._rig.node.create_subscription(
+            self._rig.ear.destroy_subscription(self._ear)
+        self._ear = self._rig.ear.create_subscription(
             TwistStamped, self._command, self._take,
             QoSProfile(depth=1000, reliability=ReliabilityPolicy.RELIABLE)) if on else None
 
@@ -77,7 +77,7 @@ class Observer:
 
     def reasons_since(self, at: Stamp) -> list[str]:
         """Return the reasons said after a time."""
-        return [values.get('reason', '') for when, _, values in self.states if when >= at]
+        return [values.get('reason', '') for when, _, values in self.states[:] if when >= at]
 
     def engage(self, on: bool = True) -> SetBool.Response:
         """Ask for the loop to start or stop."""
@@ -89,7 +89,7 @@ class Observer:
 
     def stopped_after(self, at: Stamp) -> float | None:
         """Return the seconds from a time to the first of the zeros that last; None: it moves."""
-        after = [command for command in self.commands if command.at >= at]
+        after = [command for command in self.commands[:] if command.at >= at]
         if not after:
             return 0.0
         if not after[-1].is_zero:

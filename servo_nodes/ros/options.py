@@ -51,6 +51,10 @@ class ControllerNodeSettings(Checked):
     """The controller's shell."""
 
     image: ImageSettings = group(ImageSettings)
+    priority: int = setting(
+        10, low=0, high=20, fixed=True,
+        help='how far to raise the priority of the process, as negative niceness; where '
+        'that is not permitted it stays ordinary, and the log says so')
 
 
 @dataclass(frozen=True)
