@@ -10,6 +10,7 @@ import shlex
 import house_source as source
 import pytest
 import readme_tables
+import test_package
 
 TEXT = (source.ROOT / 'README.md').read_text(encoding='utf-8')
 GUIDE = (source.ROOT / 'DEVELOPERS.md').read_text(encoding='utf-8')
@@ -63,10 +64,19 @@ def test_every_reason_is_explained():
 
 
 def test_the_executables_are_those_of_the_package():
-    from test_package import entry_points
     listed = set(re.findall(r'`(\w+)(?: [A-Z]+)?`', ''.join(
         row.split('|')[1] for row in section('Tools').splitlines() if row.startswith('| `'))))
-    assert listed == set(entry_points())
+    assert listed == set(test_package.entry_points())
+
+
+@pytest.mark.parametrize(('tool', 'option'), sorted(
+    {(tool, option) for tool, words in re.findall(r'`(servo_\w+)( [^`\n]*)`', TEXT)
+     for option in re.findall(r'--[\w-]+', words)}))
+def test_every_option_that_is_shown_exists(tool, option):
+    module = test_package.entry_points()[tool].split(':')[0].rsplit('.', 1)[0]
+    room = source.ROOT / module.replace('.', '/')
+    words = ''.join(path.read_text(encoding='utf-8') for path in room.glob('*.py'))
+    assert f"'{option}'" in words, f'{tool} {option}'
 
 
 def test_the_cautions_stand_before_the_first_command():
