@@ -286,8 +286,10 @@ class Controller:
         if self._state in ENGAGED:
             return
         self._sent, self._starting = REST, False
-        if before in ENGAGED and self._state is State.STANDBY:
-            self._progress.restart()
+        if before in ENGAGED:
+            self._servo.rest()
+            if self._state is State.STANDBY:
+                self._progress.restart()
 
     def _forget(self) -> None:
         self._intake.forget()

@@ -17,7 +17,7 @@ import numpy as np
 
 from servo_nodes.control import moments, normal, path, pose
 from servo_nodes.control.law import poses
-from servo_nodes.control.law_settings import STACKED, LawSettings
+from servo_nodes.control.law_settings import LawSettings
 from servo_nodes.control.sight import Sight
 from servo_nodes.values import SECOND_NS, Floats, Stamp
 
@@ -49,25 +49,34 @@ class Lead:
 
 
 class Guide:
-    """Plans at the start and then leads, waiting for a camera that lags behind."""
+    """Judges the start and plans there, then leads, waiting for a camera that lags behind."""
 
     def __init__(self) -> None:
-        self._pending = False
+        self._pending = self._begun = False
         self._path: path.Path | None = None
         self._left = 0.0
         self._last: Stamp = 0
         self._refusal = ''
         self._direct: tuple[Sight, Lead] | None = None
 
+    @property
+    def is_idle(self) -> bool:
+        """Whether nothing has begun: views are judged as if each were a start."""
+        return not self._begun
+
     def clear(self) -> None:
-        """Head for the goal directly, without judging the start."""
+        """Lead nobody."""
+        self._begun = False
+        self._go_direct()
+
+    def _go_direct(self) -> None:
         self._pending, self._path, self._left, self._refusal = False, None, 0.0, ''
         self._direct = None
 
     def begin(self) -> None:
-        """Judge the start with the next view."""
-        self.clear()
-        self._pending = True
+        """Judge the start with the next view, and plan."""
+        self._go_direct()
+        self._pending = self._begun = True
 
     def lead(self, xy: Floats, inverse: Floats, sight: Sight, now: Stamp, settings: LawSettings,
              focal_px: float) -> Lead:
@@ -87,6 +96,8 @@ class Guide:
             self._last = now
         if self._path is None:
             if self._direct is None or self._direct[0] is not sight:
+                if not self._begun:
+                    self._refusal = _refused(_roll(xy.T, sight), settings)
                 goal = sight.goal
                 lead = Lead(goal.xy, goal.inverse, goal.basis, refusal=self._refusal)
                 self._direct = sight, lead
@@ -110,23 +121,37 @@ class Guide:
         self._last = now
         self._left -= rate * elapsed
         if self._left < path.ARRIVED:
-            self.clear()
+            self._go_direct()
         return lead
 
     def _plan(self, xy: Floats, depths: Floats, sight: Sight, settings: LawSettings) -> None:
-        roll = abs(float(moments.roll_between(sight.goal_xy, xy)))
-        mode = settings.path.mode
-        if mode == 'planned' or (mode == 'auto' and roll > settings.path.roll):
-            T_GC = poses(xy, sight.goal_xy, depths, sight.goal_depths, settings, sight.trust)
-            if np.isfinite(T_GC).all():
-                self._path, self._left = path.planned(T_GC), 1.0
-            else:
-                self._refusal = ('path: expected enough points for a pose to plan from, got '
-                                 f'{len(sight)}')
-        elif settings.kind in STACKED:
-            limit = GOAL_ROLL_LIMIT if settings.interaction == 'goal' else ROLL_LIMIT
-            if settings.kind == 'points' and roll > limit:
-                self._refusal = (
-                    f'law.interaction {settings.interaction!r}: expected a roll of at most '
-                    f'{math.degrees(limit):.0f} degrees at the start, got '
-                    f'{math.degrees(roll):.0f}; set law.path.mode to auto or planned')
+        roll = _roll(xy, sight)
+        if not _plans(roll, settings):
+            self._refusal = _refused(roll, settings)
+            return
+        T_GC = poses(xy, sight.goal_xy, depths, sight.goal_depths, settings, sight.trust)
+        if np.isfinite(T_GC).all():
+            self._path, self._left = path.planned(T_GC), 1.0
+        else:
+            self._refusal = ('law.path: expected enough points for a pose to plan from, got '
+                             f'{len(sight)}')
+
+
+def _roll(xy: Floats, sight: Sight) -> float:
+    """Return the angle, rad, without sign, by which the points (N, 2) are turned in the image."""
+    return abs(float(moments.roll_between(sight.goal_xy, xy)))
+
+
+def _plans(roll: float, settings: LawSettings) -> bool:
+    mode = settings.path.mode
+    return mode == 'planned' or (mode == 'auto' and roll > settings.path.roll)
+
+
+def _refused(roll: float, settings: LawSettings) -> str:
+    """Return why no interaction matrix masters this roll, or nothing."""
+    limit = GOAL_ROLL_LIMIT if settings.interaction == 'goal' else ROLL_LIMIT
+    if settings.kind != 'points' or roll <= limit or _plans(roll, settings):
+        return ''
+    return (f'law.interaction {settings.interaction!r}: expected a roll of at most '
+            f'{math.degrees(limit):.0f} degrees at the start, got {math.degrees(roll):.0f}; set '
+            'law.path.mode to auto or planned')

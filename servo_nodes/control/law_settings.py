@@ -51,7 +51,7 @@ class PathSettings(Checked):
         help='direct heads for the goal, planned follows a straight camera path with constant '
              'axis of rotation, auto plans when the roll at the start exceeds path.roll')
     roll: float = setting(
-        1.6, unit='rad', low=0.1, high=3.1,
+        1.2, unit='rad', low=0.1, high=3.1,
         help='roll about the optical axis beyond which auto plans a path')
     linear: float = setting(0.08, unit='m/s', low=0.001, high=0.25,
                             help='speed along the path; keep it below caps.linear')

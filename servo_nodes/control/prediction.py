@@ -88,13 +88,11 @@ class Odometer:
 
     def _passage_at(self, time: Stamp) -> Floats:
         for start, passage, twist in reversed(self._log):
-            if start <= time:
-                break
-        else:
-            return passage
-        if start == time:
-            return passage
-        return rigid(twist, (start - time) / SECOND_NS) @ passage
+            if start == time:
+                return passage
+            if start < time:
+                return rigid(twist, (start - time) / SECOND_NS) @ passage
+        return self._log[0][1]
 
     def _passage_now(self, now: Stamp) -> Floats:
         """Return the passage at `now`; a decision and its record ask for the same moment."""

@@ -33,10 +33,11 @@ class Solution:
     ----------
     twist : (6,), raw twist of the camera in its optical frame, before the gate
     error_px : float, px, root mean square distance of the points to the goal, weighted by w^2
-    condition, smallest : float, of the weighted interaction matrix; inf and 0 without full rank
+    condition, smallest : float, of the weighted interaction matrix, before the loop is begun that
+        of the view itself; inf and 0 without full rank
     points : int, number of points with weight
-    scatter : (6,), standard deviation of the camera pose for 1 px of noise in a coordinate, m, rad,
-        when the view was first used
+    scatter : (6,), m and rad, standard deviation of the camera pose for 1 px of noise in a
+        coordinate, when the view was first used
     points_xy : (N, 2), normalised, the points the twist was computed at (predicted to now)
     view_stamp : int, ns, stamp of the view it rests on
     gain : float, 1/s, in force
@@ -110,6 +111,11 @@ class Servo:
         self._start.begin(now)
         self._guide.begin()
 
+    def rest(self) -> None:
+        """Take the loop as off: judge every view as a start, until `begin`."""
+        self._start.forget()
+        self._guide.clear()
+
     def record(self, twist: Floats, now: Stamp) -> None:
         """Take note that `twist` (6,), in the optical frame, was really sent at `now`, ns."""
         self._odometer.record(twist, now)
@@ -180,7 +186,9 @@ class Servo:
         judged = self._judged or self._judge(mean, sight)
         chosen = self._chosen(here, there, mean)
         system = normal.system(chosen, judged.squares)
-        square = float(system[6, 6]) if lead.twist is None else _squared_error(xy, sight, judged.squares)
+        square = float(system[6, 6])
+        if lead.twist is not None:
+            square = _squared_error(xy, sight, judged.squares)
         error_px = self._focal_px * math.sqrt(max(square, 0.0) / judged.total)
         gain = gain_at(error_px, settings)
         fit = self._fit(system, chosen, judged)
@@ -189,6 +197,9 @@ class Servo:
         else:
             twist = law.twists(xy.T, lead.goal_xy.T, 1 / inverse, 1 / lead.goal_inverse, settings,
                                weights=judged.weights, gain=gain)
+        if chosen is not here and self._guide.is_idle:
+            # The mean matrix of a far roll may lack rank where the view, led by a path, does not.
+            fit = self._fit(normal.system(here, judged.squares), here, judged)
         if self._scatter is None:
             self._scatter = _spread(fit.scatter, settings.axes) / self._focal_px
         smallest = float(fit.values[0])
@@ -200,6 +211,8 @@ class Servo:
     def _chosen(self, here: Floats, there: Floats, mean: Floats) -> Floats:
         """Return the basis (10, N) that the choice of interaction inverts (first)."""
         choice = self.settings.interaction
+        if self.settings.kind != 'points':
+            return here
         if choice == 'goal':
             return _with_error_of(there, here)
         return mean if choice == 'mean' else here

@@ -120,6 +120,11 @@ def test_the_live_twist_is_that_of_the_stateless_law(choice):
         stack = (rows[0] * law.interaction.points(view.points_xy, view.depths)
                  + rows[1] * law.interaction.points(view.goal_xy, view.goal_depths))
         values = np.linalg.svd(stack[:, axes] * np.repeat(weights, 2)[:, None], compute_uv=False)
+        here = law.interaction.points(view.points_xy, view.depths)[:, axes]
+        itself = np.linalg.svd(here * np.repeat(weights, 2)[:, None], compute_uv=False)
+        assert solution.smallest == pytest.approx(itself[-1], rel=1e-7)
+        servo.begin(0)
+        solution = servo.solve(0)
         assert solution.smallest == pytest.approx(values[-1], rel=1e-7)
         assert solution.condition == pytest.approx(values[0] / values[-1], rel=1e-7)
 
@@ -434,6 +439,28 @@ def test_the_gain_grows_towards_the_goal_within_its_bounds():
 def law_gain(error_px, settings):
     from servo_nodes.control.schedule import gain_at
     return gain_at(error_px, settings)
+
+
+def test_before_the_loop_is_begun_every_view_is_judged_as_a_start():
+    """A marker's corners rolled by 90 degrees: the mean matrix lacks rank, the view does not."""
+    turned = motion.pose_from_parts(motion.rotation_from_vector([0, 0, np.pi / 2]), (0, 0, 0.5))
+    settings = LawSettings(weights=WeightSettings(estimator='none'))
+    servo = ready(settings)
+    servo.observe(seen(turned))
+    assert servo.solve(0).condition < 100 and not servo.solve(0).refusal
+    servo.begin(0)
+    led = servo.solve(0)
+    assert led.condition < 100 and led.left == 1.0
+    direct = ready(replace(settings, path=PathSettings(mode='direct')))
+    direct.begin(0)
+    direct.observe(seen(turned))
+    assert direct.solve(0).condition > 1e5
+    far = motion.pose_from_parts(motion.rotation_from_vector([0, 0, 3.1]), (0, 0, 0.5))
+    direct.rest()
+    direct.observe(seen(far))
+    assert 'expected a roll of at most 172' in direct.solve(0).refusal
+    direct.observe(seen(battery.home()))
+    assert not direct.solve(0).refusal
 
 
 def test_reset_forgets_the_view_and_keeps_the_camera():

@@ -53,7 +53,7 @@ class Asking:
         self.settings = None
         self.twist, self.error_px, self.changes = twist, error_px, changes
         self.raises = None
-        self.began, self.recorded, self.seen = [], [], []
+        self.began, self.recorded, self.seen, self.rests = [], [], [], 0
 
     def calibrate(self, camera):
         self.camera = camera
@@ -63,6 +63,9 @@ class Asking:
 
     def begin(self, now):
         self.began.append(now)
+
+    def rest(self):
+        self.rests += 1
 
     def observe(self, view):
         self.seen.append(view)
