@@ -21,8 +21,9 @@ from servo_nodes.ros.diagnostics import OK, WARN
 from servo_nodes.ros.inputs import Inputs
 from servo_nodes.ros.options import ControllerNodeSettings
 from servo_nodes.ros.pacer import Pacer, raise_priority
+from servo_nodes.ros.process import run
 from servo_nodes.ros.reporter import Reporter
-from servo_nodes.ros.shell import Shell, pause, run
+from servo_nodes.ros.shell import Shell, pause
 from servo_nodes.values import Answer, Stamp, Twist
 
 ZEROS = 20
@@ -50,11 +51,14 @@ class ControllerNode(Shell):
         self.doors.serve(Trigger, '~/reset', self._reset)
         return ''
 
-    def activate(self) -> str:
-        """Start deciding, from standby."""
+    def own_process(self) -> None:
+        """Run before others, where that is permitted."""
         refusal = raise_priority(self.parameters[ControllerNodeSettings].priority)
         if refusal:
             self.get_logger().info(refusal)
+
+    def activate(self) -> str:
+        """Start deciding, from standby."""
         self.reporter.begin()
         self._pacer = Pacer(self.controller.settings.rate, self._tick, self.fail, 'control')
         self._pacer.start()

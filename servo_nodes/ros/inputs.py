@@ -17,7 +17,7 @@ from std_msgs.msg import Bool, Empty
 from servo_nodes import wire
 from servo_nodes.camera import Camera
 from servo_nodes.control.controller import Controller
-from servo_nodes.ros.shell import camera_info_name
+from servo_nodes.ros.names import camera_info_name
 from servo_nodes.ros.timeline import Timeline
 from servo_nodes.values import Calibration, Reason
 

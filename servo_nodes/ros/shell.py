@@ -1,32 +1,19 @@
 # Copyright 2026 servo_nodes maintainers
 # SPDX-License-Identifier: Apache-2.0
-"""What the three nodes share: managed states, parameters, logging, and an end at rest.
-
-The middleware's own signal handlers end its context before anybody can send a last zero, so they
-are switched off. Ours only write to a pipe that the main thread waits at, whichever thread the
-signal hit; the executor runs in a second thread. Whatever ends the process, a signal or an
-exception, `rest` is called while the context still lives.
-"""
+"""What the three nodes share: managed states, parameters, words and time."""
 
 from __future__ import annotations
 
 import gc
-import os
-import signal
-import sys
-import threading
 import time
 import traceback
 import typing
 from collections.abc import Callable, Mapping
 
-import rclpy
 from lifecycle_msgs.msg import State
 from rcl_interfaces.msg import SetParametersResult
 from rclpy.clock import Clock, ClockType
-from rclpy.executors import ExternalShutdownException, ShutdownException, SingleThreadedExecutor
 from rclpy.lifecycle import LifecycleNode, TransitionCallbackReturn
-from rclpy.signals import SignalHandlerOptions
 
 from servo_nodes.ros.diagnostics import ERROR, WARN
 from servo_nodes.ros.doors import Doors
@@ -34,9 +21,6 @@ from servo_nodes.ros.limiter import Limiter
 from servo_nodes.ros.options import ShellSettings
 from servo_nodes.ros.parameters import Parameters
 from servo_nodes.values import SECOND_NS
-
-SIGNALS = frozenset((signal.SIGINT, signal.SIGTERM))
-LAST_RESORT_S = 0.8
 
 
 class Shell(LifecycleNode):
@@ -78,6 +62,9 @@ class Shell(LifecycleNode):
 
     def rest(self) -> None:
         """Say the last words on the wire; called once, whatever ends the process."""
+
+    def own_process(self) -> None:
+        """Set up the process, when it is ours alone."""
 
     def adopt(self, settings: Mapping[type, object]) -> str:
         """Put changed settings in force, or return the sentence that refuses them."""
@@ -212,104 +199,6 @@ class Shell(LifecycleNode):
             words = ''.join(traceback.format_exception(type(error), error, error.__traceback__))
             self.get_logger().error(f'ending after an unexpected error\n{words}')
             self.call_end()
-
-
-def camera_info_name(node: typing.Any) -> str:
-    """Return the topic of the calibration: beside the image, unless it was remapped itself."""
-    return _beside_image(node, 'camera_info',
-                         lambda image: f'{image.rsplit("/", 1)[0]}/camera_info')
-
-
-def compressed_name(node: typing.Any) -> str:
-    """Return the topic of the compressed image: below the image, unless it was remapped itself."""
-    return _beside_image(node, 'image/compressed', lambda image: f'{image}/compressed')
-
-
-def _beside_image(node: typing.Any, name: str, derived: Callable[[str], str]) -> str:
-    if node.resolve_topic_name(name) != node.resolve_topic_name(name, only_expand=True):
-        return name
-    image = node.resolve_topic_name('image')
-    return name if image == node.resolve_topic_name('image', only_expand=True) else derived(image)
-
-
-class Call:
-    """The call to end: a pipe that signals, and whoever fails, write to."""
-
-    def __init__(self) -> None:
-        self._reader, self._writer = os.pipe()
-        os.set_blocking(self._writer, False)
-        for number in SIGNALS:
-            signal.signal(number, _noted)
-        signal.set_wakeup_fd(self._writer, warn_on_full_buffer=False)
-
-    def make(self) -> None:
-        """Call, from any thread."""
-        os.write(self._writer, b'!')
-
-    def wait(self) -> None:
-        """Wait for a call."""
-        os.read(self._reader, 1)
-
-
-def _noted(number: int, frame: object) -> None:
-    """Do nothing: the byte in the pipe is the message."""
-
-
-def run(make: Callable[[], Shell], argv: list[str] | None = None) -> int:
-    """Run a node to its end; return the exit code: 0 asked to, 1 failed, 2 unusable parameters."""
-    call = Call()
-    try:
-        rclpy.init(args=argv, signal_handler_options=SignalHandlerOptions.NO)
-        node = make()
-    except (ValueError, RuntimeError) as error:
-        print(f'{" ".join(str(error).split())}', file=sys.stderr)
-        rclpy.try_shutdown()
-        return 2
-    node.call_end = call.make
-    executor = SingleThreadedExecutor()
-    executor.add_node(node)
-    ended = threading.Event()
-    try:
-        node.start()
-    except Exception as error:
-        node.fail(error)
-    spinner = threading.Thread(target=_spin, args=(executor, node, ended), name='executor',
-                               daemon=True)
-    spinner.start()
-    call.wait()
-    return _end(node, executor, spinner, ended)
-
-
-def _spin(executor: SingleThreadedExecutor, node: Shell, ended: threading.Event) -> None:
-    try:
-        while not ended.is_set():
-            executor.spin_once(timeout_sec=1.0)
-    except (ShutdownException, ExternalShutdownException):
-        pass
-    except Exception as error:
-        node.fail(error)
-
-
-def _end(node: Shell, executor: SingleThreadedExecutor, spinner: threading.Thread,
-         ended: threading.Event) -> int:
-    """Rest, then take everything down; what hangs is left behind, for launch kills the patient."""
-    code = 0 if node.failure is None else 1
-    last_resort = threading.Timer(LAST_RESORT_S, os._exit, (code,))
-    last_resort.daemon = True
-    last_resort.start()
-    node.rest()
-    ended.set()
-    executor.wake()
-    spinner.join(0.3)
-    sys.stdout.flush()
-    sys.stderr.flush()
-    if spinner.is_alive():
-        os._exit(code)
-    executor.shutdown(timeout_sec=0.0)
-    node.destroy_node()
-    rclpy.try_shutdown()
-    last_resort.cancel()
-    return code
 
 
 def pause(seconds: float) -> None:

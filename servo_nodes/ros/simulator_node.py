@@ -21,7 +21,8 @@ from servo_nodes.ros.meters import Durations
 from servo_nodes.ros.options import SimulatorNodeSettings
 from servo_nodes.ros.pacer import Pacer
 from servo_nodes.ros.pictures import Pictures
-from servo_nodes.ros.shell import Shell, run
+from servo_nodes.ros.process import run
+from servo_nodes.ros.shell import Shell
 from servo_nodes.simulation.simulator import Picture, Simulator, SimulatorSettings
 from servo_nodes.values import Stamp
 
@@ -110,9 +111,8 @@ class SimulatorNode(Shell):
                 self._publish(self.simulator.arrivals())
 
     def _publish(self, pictures: list[Picture]) -> None:
-        ahead = 0
-        if self._clock_out is None:
-            ahead = self.now_ns() - self._time(time.monotonic_ns())
+        lead = self._clock_out is not None
+        ahead = 0 if lead else self.now_ns() - self._time(time.monotonic_ns())
         for picture in pictures:
             # A stamp of zero is a fault that must stay one.
             self._pictures.show(picture, picture.stamp + ahead if picture.stamp else 0)

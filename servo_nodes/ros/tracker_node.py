@@ -18,8 +18,10 @@ from servo_nodes import wire
 from servo_nodes.ros.artist import Artist
 from servo_nodes.ros.diagnostics import ERROR, OK
 from servo_nodes.ros.intake import image_from_compressed
+from servo_nodes.ros.names import camera_info_name, compressed_name
 from servo_nodes.ros.options import TrackerNodeSettings
-from servo_nodes.ros.shell import Shell, camera_info_name, compressed_name, run
+from servo_nodes.ros.process import run
+from servo_nodes.ros.shell import Shell
 from servo_nodes.ros.teacher import aimed, taught
 from servo_nodes.ros.watch import Watch
 from servo_nodes.tracking.tracker import Tracker, TrackerSettings

@@ -45,3 +45,10 @@ def module_rig():
     from servo_nodes.ros.rig import Rig
     with free_domain() as domain, Rig(domain) as made:
         yield made
+
+
+@pytest.fixture
+def free_domain_number():
+    """Return a ROS domain for a tool that makes its own rig."""
+    with free_domain() as domain:
+        yield domain
