@@ -287,7 +287,7 @@ def test_a_mirrored_tilt_ends_in_a_spurious_equilibrium(tilt, distance, end_tilt
     """
     goal, start = rotated((tilt, 0, 0), (0, 0, distance)), rotated((-tilt, 0, 0), (0, 0, distance))
     settings = replace(BARE, interaction='current')
-    end = battery.run(start[None], settings, goal=goal, gain=1.0, step=0.02, samples=3000)[0].end
+    end = battery.run(start[None], settings, goal=goal, gain=1.0, step=0.05, samples=1000)[0].end
     np.testing.assert_allclose(vector_deg(end), (end_tilt, 0, 0), atol=1e-4)
     np.testing.assert_allclose(end[:3, 3], shift, atol=1e-5)
     xy, goal_xy, depths, goal_depths = _stacked(end, goal=goal)

@@ -2,7 +2,7 @@
 # SPDX-License-Identifier: Apache-2.0
 """Law and gate together: what cannot converge is refused or ends in a fault, with its reason.
 
-The spurious equilibria are those of CHECKS LM-A and LM-B (after Chaumette 1998), the rolls R-180
+The spurious equilibria are LM-A and LM-B (after Chaumette 1998), the rolls R-180
 and BAT-roll170 (after Gans, Hutchinson & Corke 2002); the camera moves by the exact exponential.
 """
 
