@@ -3,28 +3,30 @@
 """Recorded messages -> timed events for the loop, and what the recorded controller did.
 
 The axis of time is the one on which the messages were recorded. Stamps are carried over to it as
-a node carries them over to its steady clock: a stamp keeps its age. Requests leave no message, so
-that they are read off the commands, which are published only while the loop is on, and the state.
+a node carries them over to its steady clock: a stamp keeps its age. A command is stamped when it
+is sent, so that its stamp tells how late the recorder was, by which everything is taken back.
+Requests leave no message: they are read off the commands, which are published only while the loop
+is on, and off the state.
 """
 
 from __future__ import annotations
 
 import collections
-import functools
 import typing
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 
 from servo_nodes import wire
 from servo_nodes.control.states import ENGAGED
-from servo_nodes.offline.bags import Bag, Message
+from servo_nodes.offline.bags import Bag
 from servo_nodes.offline.loops import Event, Kind
 from servo_nodes.offline.replay_settings import Choice, Names, merged, names_from_event
+from servo_nodes.offline.replay_time import Axis, Decoder, lag_at_start, lag_of
 from servo_nodes.tracking.pictures import image_from_bytes
 from servo_nodes.values import SECOND_NS, Reason, Stamp, State, Twist
 
 SILENCE_NS = SECOND_NS // 4
-SAME_CLOCK_NS = 10 * SECOND_NS
+LATE_NS = SECOND_NS // 10
 _ENGAGED = frozenset(state.value for state in ENGAGED)
 _STATES = frozenset(state.value for state in State)
 
@@ -47,79 +49,18 @@ class Recorded:
     turns : changes of state and reason that it told
     commands : int, how many it sent
     dropped : how many messages of a part could not be read, and the first sentence about one
+    latest : int, ns, how late the recorder was at most
     """
 
     turns: list[Turn] = field(default_factory=list)
     commands: int = 0
     dropped: dict[str, tuple[int, str]] = field(default_factory=dict)
+    latest: Stamp = 0
 
     def drop(self, part: str, text: str) -> None:
         """Count a message that could not be read."""
         count, first = self.dropped.get(part, (0, text))
         self.dropped[part] = count + 1, first
-
-
-@functools.cache
-def _standard_types() -> typing.Any:
-    from rosbags.typesys import Stores, get_typestore
-    return get_typestore(Stores.LATEST)
-
-
-class Decoder:
-    """Bytes of a recorded message -> the message, by the standard definitions."""
-
-    def __init__(self) -> None:
-        self._store = _standard_types()
-
-    def __call__(self, message: Message) -> typing.Any:
-        """Return the message; ValueError with one sentence when its bytes are not of its type."""
-        try:
-            return self._store.deserialize_cdr(message.data, message.kind)
-        except Exception as error:
-            raise ValueError(f'{message.topic}: expected a {message.kind}, got '
-                             f'{len(message.data)} bytes that are none') from error
-
-
-class Axis:
-    """Carries stamps over to the axis on which the messages were recorded."""
-
-    def __init__(self) -> None:
-        self._clock: Stamp | None = None
-        self._offset: Stamp | None = None
-        self._last: tuple[Stamp, Stamp] | None = None
-        self.note = ''
-
-    def set_clock(self, now: Stamp) -> bool:
-        """Take the time of a simulated clock; return whether it was set back."""
-        back = self._clock is not None and now < self._clock
-        self._clock = now
-        if back:
-            self._last = None
-        return back
-
-    def moved(self, stamp: Stamp, time: Stamp) -> Stamp:
-        """Return `stamp`, ns, of a message recorded at `time`, on the axis; zero stays zero."""
-        if stamp == 0:
-            return 0
-        if self._clock is not None:
-            return self._ordered(stamp, time - (self._clock - stamp))
-        if self._offset is None:
-            apart = abs(time - stamp) > SAME_CLOCK_NS
-            self._offset = time - stamp if apart else 0
-            if apart:
-                self.note = (f'the stamps are {(time - stamp) / SECOND_NS:.0f} s off the time of '
-                             'recording; ages are counted from the first')
-        return stamp + self._offset
-
-    def _ordered(self, stamp: Stamp, moved: Stamp) -> Stamp:
-        """Keep the order of stamps, which a coarse clock would blur."""
-        if self._last is not None:
-            last, last_moved = self._last
-            if stamp == last:
-                return last_moved
-            moved = max(moved, last_moved + 1) if stamp > last else min(moved, last_moved - 1)
-        self._last = stamp, moved
-        return moved
 
 
 def recorded_names(bag: Bag, parts: Mapping[str, str], notes: list[str]) -> Names:
@@ -176,11 +117,16 @@ class Script:
         self._engaged = False
         self._faulted = False
         self._commanded: Stamp | None = None
+        self._lag = lag_at_start(bag, parts)
+        self._lagging = 'clock' not in parts
         self.recorded = Recorded()
 
     @property
     def note(self) -> str:
         """Return what is odd about the clocks; empty for nothing."""
+        if self.recorded.latest > LATE_NS:
+            return (f'the recorder was up to {self.recorded.latest / SECOND_NS:.2f} s late; times '
+                    'were taken back by what the stamps of the commands tell')
         return self._axis.note
 
     def events(self) -> Iterator[Event]:
@@ -194,28 +140,34 @@ class Script:
         for message in self._bag.messages(self._parts):
             if first:
                 first = False
-                yield Event(message.time, Kind.GRAPH, (1, 1))
+                yield Event(message.time - self._lag, Kind.GRAPH, (1, 1))
                 if self._guessed:
                     yield Event(message.time, Kind.ENGAGE, True)
             part = self._parts[message.topic]
+            time = message.time - self._lag
             try:
-                yield from self._taken(part, message.time, self._decode(message))
+                decoded = self._decode(message)
+                if part == 'command' and self._lagging:
+                    self._lag = lag_of(message.time, wire.stamp_from_time(decoded.header.stamp))
+                    self.recorded.latest = max(self.recorded.latest, self._lag)
+                    time = message.time - self._lag
+                yield from self._taken(part, time, decoded)
             except ValueError as error:
                 self.recorded.drop(part, str(error))
                 if part == 'features':
-                    yield Event(message.time, Kind.REFUSED, (Reason.NOT_FINITE, str(error)))
+                    yield Event(time, Kind.REFUSED, (Reason.NOT_FINITE, str(error)))
 
     def _taken(self, part: str, time: Stamp, message: typing.Any) -> Iterator[Event]:
         if part == 'command':
             yield from self._command(time, wire.twist_from_message(message))
         elif part == 'features':
             view = wire.view_from_cloud(message)
-            yield Event(time, Kind.VIEW, view, self._axis.moved(view.stamp, time))
+            yield self._seen(time, Kind.VIEW, view)
         elif part in ('image', 'compressed'):
             image = (wire.image_from_message(message) if part == 'image' else image_from_bytes(
                 message.data, wire.stamp_from_time(message.header.stamp),
                 str(message.header.frame_id)))
-            yield Event(time, Kind.IMAGE, image, self._axis.moved(image.stamp, time))
+            yield self._seen(time, Kind.IMAGE, image)
         elif part == 'depth':
             yield Event(time, Kind.DEPTH, wire.image_from_message(message))
         elif part == 'camera_info':
@@ -231,6 +183,11 @@ class Script:
                 yield Event(time, Kind.JUMP)
         elif part == 'parameters':
             yield from self._parameters(time, message)
+
+    def _seen(self, time: Stamp, kind: Kind, value: typing.Any) -> Event:
+        """Return the event of an image or a view, which cannot come before it was taken."""
+        stamp = self._axis.moved(value.stamp, time)
+        return Event(max(time, stamp) if self._lag else time, kind, value, stamp)
 
     def _command(self, time: Stamp, twist: Twist) -> Iterator[Event]:
         """Tick when the recorded controller did; commands after silence: it was engaged."""

@@ -13,8 +13,8 @@ import numpy as np
 
 from servo_nodes import goal, wire
 from servo_nodes.offline.bags import Bag, Message
-from servo_nodes.offline.replay_events import Decoder
 from servo_nodes.offline.replay_settings import Choice
+from servo_nodes.offline.replay_time import Decoder
 from servo_nodes.offline.verdict import Thresholds
 from servo_nodes.tracking.pictures import image_from_bytes
 from servo_nodes.tracking.tracker import Tracker

@@ -103,9 +103,9 @@ class Log:
         self.events: list[Event] = []
         self.stops: list[Stop] = []
         self.answers: list[Told] = []
-        self.refusals = 0
+        self.refusals: Counter[tuple[str, str]] = Counter()
         self.skipped = 0
-        self.views = self.ticks = self.compared = 0
+        self.views = self.ticks = self.compared = self.filled = 0
         self.states: Counter[State] = Counter()
         self.points: Counter[int] = Counter()
         self.latency, self.linear, self.angular = Spread(), Spread(), Spread()
@@ -163,8 +163,10 @@ class Log:
 
     def _told(self, told: Told) -> None:
         if not told.answer.ok:
-            self.refusals += 1
-        same = [old for old in self.answers if old[1:] == told[1:]]
+            self.refusals[told.kind.value, told.answer.text.partition(':')[0]] += 1
+        same = [old for old in self.answers if (old.kind, old.answer.ok) == (
+            told.kind, told.answer.ok) and old.answer.text.partition(':')[0]
+            == told.answer.text.partition(':')[0]]
         if not same and len(self.answers) < 100:
             self.answers.append(told)
 
@@ -190,6 +192,8 @@ class Log:
             self._note_view(time, command, command.view_stamp)
         if isinstance(given, Twist):
             self._compare(time, command, numbers, given)
+        elif state in ENGAGED:
+            self.filled += 1
         return turned
 
     def _note_view(self, time: Stamp, command: Command, stamp: Stamp) -> None:

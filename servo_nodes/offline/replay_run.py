@@ -33,6 +33,7 @@ from servo_nodes.settings import mapping_from_settings
 from servo_nodes.tracking.tracker import Tracker
 from servo_nodes.values import SECOND_NS, Calibration, Stamp
 
+LOST = 0.05
 _PACKAGES = ('numpy', 'opencv-python-headless', 'opencv-python', 'scipy', 'rosbags')
 
 
@@ -73,7 +74,7 @@ def replayed(bag: Bag, request: Request,
     loop = Loop(Controller(choice.controller), tracker, rectified=choice.rectified,
                 paired='features' in parts)
     run = _Run(choice, progress)
-    for outcome in loop.run(run.watched(script.events()), until=bag.end):
+    for outcome in loop.run(run.watched(script.events())):
         run.take(outcome)
     run.log.spans.end()
     notes += _notes(bag, script, run.log, parts, choice)
@@ -127,10 +128,15 @@ def _notes(bag: Bag, script: Script, log: Log, parts: Mapping[str, str],
     if not {'command', 'state'} & set(parts):
         found.append('neither commands nor states were recorded: the shadow was engaged as soon '
                      'as it could be')
+    if log.compared and log.filled > LOST * (log.filled + log.compared):
+        found.append(f'{log.filled} of {log.filled + log.compared} commands with the loop on were '
+                     'not recorded: a recording that loses messages says little')
     if choice.controller.heartbeat.required and 'heartbeat' not in parts:
         found.append('heartbeat.required is true and no heartbeat was recorded')
-    found += [f'{told.kind.value} was refused: {told.answer.text}' for told in log.answers
-              if not told.answer.ok]
+    for told in log.answers:
+        if not told.answer.ok:
+            count = log.refusals[told.kind.value, told.answer.text.partition(':')[0]]
+            found.append(f'{told.kind.value} was refused {count} times, first: {told.answer.text}')
     return found
 
 

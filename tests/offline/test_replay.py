@@ -377,3 +377,21 @@ def test_named_topics_are_used_whatever_the_others_are_called(tmp_path, capsys, 
     code, result = replay(capsys, folder, '--topics', 'features=/arm/points', 'command=arm/go')
     assert code == 0 and result['parts']['features'] == 'arm/points'
     assert finding(result, 'deviation.linear')['value'] == 0.0
+
+
+def test_a_recorder_that_was_late_is_found_out_by_the_stamps_of_the_commands(
+        tmp_path, capsys, plain):
+    """Everything is recorded 0.6 s late, and the stamps tell."""
+    late = [(time + 600_000_000, *rest) for time, *rest in plain.messages]
+    folder = recordings.written(tmp_path / 'run', late)
+    code, result = replay(capsys, folder)
+    assert code == 0 and finding(result, 'deviation.linear')['value'] == 0.0
+    assert any('up to 0.60 s late' in note for note in result['notes'])
+
+
+def test_a_recording_that_lost_commands_says_so(tmp_path, capsys, plain):
+    kept = [item for number, item in enumerate(plain.messages)
+            if item[1] != '/servo/camera_twist' or number % 4 == 0]
+    folder = recordings.written(tmp_path / 'run', kept)
+    _, result = replay(capsys, folder)
+    assert any('were not recorded' in note for note in result['notes'])
