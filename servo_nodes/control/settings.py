@@ -155,8 +155,8 @@ class SettleSettings(Checked):
         help='largest turn that the law still asks for')
     noise_px: float = setting(
         0.1, unit='px', low=0.0, high=10.0,
-        help='noise of the tracked points; where they tell the pose less surely than settle.linear '
-             'and settle.angular ask, what they do tell is enough')
+        help='noise of the tracked points; where they tell the pose less surely than '
+             'settle.linear and settle.angular ask, what they do tell is enough')
     duration: float = setting(
         0.5, unit='s', low=0.02, high=30.0,
         help='how long all of this must hold before the state turns to settled')
