@@ -46,6 +46,8 @@ PROFILES = MappingProxyType({
     ('in', 'camera_twist'): _profile(reliable=True),
     ('in', '~/halt'): _profile(reliable=True, depth=10),
     ('in', '~/heartbeat'): _profile(reliable=False, depth=1),
+    ('in', 'input'): _profile(reliable=False),
+    ('out', 'output'): _profile(reliable=True),
     ('out', 'image'): _profile(reliable=True),
     ('out', 'depth'): _profile(reliable=True),
     ('out', 'camera_info'): _profile(reliable=True),

@@ -54,7 +54,7 @@ class Trial:
         self.nodes[node] = child
         return child
 
-    def teach(self, timeout: float = 20.0) -> str:
+    def teach(self, timeout: float = 40.0) -> str:
         """Teach what the camera sees, as soon as it sees anything; return the answer."""
         said = ''
 
