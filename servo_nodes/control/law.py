@@ -35,11 +35,6 @@ from servo_nodes.control.law_settings import LawSettings as LawSettings
 from servo_nodes.values import Floats
 
 
-def damping_of(settings: LawSettings) -> least_squares.Damping:
-    """Return the damping that the settings ask for."""
-    return least_squares.Damping(settings.damping.largest, settings.damping.below)
-
-
 def stacks_of(points_xy: Floats, goal_xy: Floats, depths: Floats, goal_depths: Floats,
               settings: LawSettings) -> tuple[Floats, ...]:
     """Return the matrices (..., 2N, 6) that are inverted: one, or two to blend."""
@@ -100,7 +95,7 @@ def _from_stacks(stacks: tuple[Floats, ...], error: Floats, settings: LawSetting
     if settings.solver == 'box':
         twist = [_box(stack, factor * error, settings) for stack in stacks]
     else:
-        damping = damping_of(settings)
+        damping = settings.damping.factors
         twist = [-factor * _fits_of_axes(stack, error, settings, damping) for stack in stacks]
     return twist[0] if len(twist) == 1 else 0.5 * (twist[0] + twist[1])
 
@@ -135,7 +130,7 @@ def _box(stack: Floats, push: Floats, settings: LawSettings) -> Floats:
 def _from_pose_or_parts(points_xy: Floats, goal_xy: Floats, depths: Floats, goal_depths: Floats,
                         settings: LawSettings, weights: Floats | None) -> Floats:
     if settings.kind == 'partitioned':
-        return partitioned.twists(points_xy, goal_xy, depths, weights, damping_of(settings))
+        return partitioned.twists(points_xy, goal_xy, depths, weights, settings.damping.factors)
     T_GC = poses(points_xy, goal_xy, depths, goal_depths, settings, weights)
     if settings.kind == 'pose':
         return pose.twists(T_GC)

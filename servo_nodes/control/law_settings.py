@@ -7,6 +7,7 @@ from __future__ import annotations
 import functools
 from dataclasses import dataclass
 
+from servo_nodes.control.least_squares import Damping
 from servo_nodes.control.schedule import LARGEST_RATIO
 from servo_nodes.control.weights import ESTIMATORS
 from servo_nodes.settings import Checked, group, setting
@@ -40,6 +41,11 @@ class DampingSettings(Checked):
         help='smallest singular value under which damping sets in; higher is calmer and slower')
     largest: float = setting(
         0.01, low=0.0, high=1.0, help='damping factor where the smallest singular value is zero')
+
+    @functools.cached_property
+    def factors(self) -> Damping:
+        """Return them in the form the fits take."""
+        return Damping(self.largest, self.below)
 
 
 @dataclass(frozen=True)

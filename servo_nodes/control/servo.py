@@ -219,7 +219,7 @@ class Servo:
 
     def _fit(self, system: Floats, basis: Floats, judged: _Judged) -> least_squares.Fit:
         """Return the fit of the axes that move; through the rows where the system is too poor."""
-        axes, damping = self.settings.axes, law.damping_of(self.settings)
+        axes, damping = self.settings.axes, self.settings.damping.factors
         if len(axes) < 6:
             system = system[np.ix_((*axes, 6), (*axes, 6))]
         fit = least_squares.fit_normal(system[:-1, :-1], system[:-1, -1], damping)
