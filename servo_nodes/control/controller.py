@@ -25,17 +25,8 @@ from servo_nodes.control.states import ENGAGED, MOVING, Event
 from servo_nodes.control.surroundings import Surroundings
 from servo_nodes.control.survey import broken, figures, surveyed
 from servo_nodes.control.tool import REST, Numbers, Outlet
-from servo_nodes.control.watch import Intake
-from servo_nodes.values import (
-    SECOND_NS,
-    Answer,
-    Command,
-    Reason,
-    Stamp,
-    State,
-    Twist,
-    View,
-)
+from servo_nodes.control.watch import Intake, age
+from servo_nodes.values import Answer, Command, Reason, Stamp, State, Twist, View
 
 _EVENTS = {Reaction.FAULT: Event.FAULT, Reaction.STANDBY: Event.JUMP, Reaction.HOLD: Event.HOLD}
 
@@ -57,8 +48,7 @@ class Controller:
         self._around = Surroundings()
         self._progress = Progress()
         self._state = State.STANDBY
-        self._row: Row | None = None
-        self._detail = ''
+        self._reason, self._detail, self._release = Reason.NONE, '', 0
         self._starting = self._jumping = self._jumped = False
         self._sent: Numbers = REST
         self._wanted: Numbers = REST
@@ -136,8 +126,8 @@ class Controller:
             return Answer(True, f'the loop is off; state {self._state.value}')
         if self._state in ENGAGED:
             return Answer(True, f'the loop is on already; state {self._state.value}')
-        if self._state is State.FAULTED and self._row is not None:
-            return Answer(False, f'{self._row.reason.value}: {self._detail}')
+        if self._state is State.FAULTED:
+            return Answer(False, f'{self._reason.value}: {self._detail}')
         self._jumped = False
         now = self._newest()
         try:
@@ -145,12 +135,11 @@ class Controller:
                 self._take(now)
         except Exception as error:
             self._poison(error)
-            return Answer(False, f'{Reason.EXCEPTION.value}: {self._detail}')
+            return Answer(False, f'{self._reason.value}: {self._detail}')
         row = gate.verdict(situation := self._situation(now), gate.REFUSING)
         if row is not None:
             return Answer(False, f'{row.reason.value}: {row.sentence(situation)}')
-        self._starting, self._row, self._detail = True, None, ''
-        self._turn(Event.ENGAGE)
+        self._start(Event.ENGAGE)
         return Answer(True, 'the loop is on')
 
     def reset(self) -> Answer:
@@ -159,12 +148,11 @@ class Controller:
             return Answer(False, f'reset: expected state faulted, got {self._state.value}; '
                           'disengage first')
         if self._around.halt:
-            return Answer(False, 'halted: expected the halt input to be false, got true; '
-                          'release it first')
+            return Answer(False, 'halt: expected false, got true; release the halt input first')
         self._forget()
         self._around.release()
         self._jumped, self._error = False, None
-        self._row, self._detail = None, ''
+        self._reason, self._detail = Reason.NONE, ''
         self._progress.restart()
         self._turn(Event.RESET)
         return Answer(True, 'reset; engage to start')
@@ -184,9 +172,8 @@ class Controller:
         try:
             if self._error is None:
                 self._decide(now)
-                return self._answer(now, figures(
-                    self._around, self._intake, self._progress, self._solution, now,
-                    ratio=self._ratio))
+                return self._answer(now, figures(self._around, self._intake, self._progress,
+                                                 self._solution, now, ratio=self._ratio))
         except Exception as error:
             self._poison(error)
         return self._answer(now, {})
@@ -195,8 +182,7 @@ class Controller:
         """Stand still until a reset: nothing in here can be trusted any more."""
         self._error = error
         situation = broken(self._settings, error)
-        self._row = gate.verdict(situation)
-        self._detail = '' if self._row is None else self._row.sentence(situation)
+        self._name(gate.verdict(situation), situation)
         self._sent = REST
         self._turn(Event.FAULT)
 
@@ -204,7 +190,7 @@ class Controller:
         if self._jumping or (self._ticked is not None and now < self._ticked):
             self._forget()
             self._jumping, self._jumped = False, True
-        duration = 0.0 if self._ticked is None else (now - self._ticked) / SECOND_NS
+        duration = 0.0 if self._ticked is None else age(self._ticked, now)
         self._ticked = now
         self._progress.leash.add(self._sent, duration)
         self._intake.moved(self._sent, duration)
@@ -212,7 +198,9 @@ class Controller:
         self._take(now)
         if self._state in ENGAGED:
             if self._starting:
-                self._begin(now)
+                self._starting = False
+                self._servo.begin(now)
+                self._progress.begin()
             self._solve(now)
             if self._solution is not None and self._state in MOVING:
                 self._progress.add(self._solution, self._wanted, self._view, now,
@@ -240,11 +228,6 @@ class Controller:
         solution = self._solution = self._servo.solve(now)
         self._wanted = REST if solution is None else solution.twist.tolist()
 
-    def _begin(self, now: Stamp) -> None:
-        self._starting = False
-        self._servo.begin(now)
-        self._progress.begin()
-
     def _situation(self, now: Stamp | None) -> Situation:
         return surveyed(self._settings, self._around, self._intake, self._progress,
                         self._solution, self._wanted, now, jumped=self._jumped)
@@ -256,16 +239,28 @@ class Controller:
         row = gate.verdict(situation)
         if row is not None and row.reaction is not Reaction.SLOW:
             self._intake.good_in_a_row = 0
-            self._row, self._detail = row, row.sentence(situation)
+            self._name(row, situation)
             if self._state in ENGAGED or row.always:
                 self._turn(_EVENTS[row.reaction])
-        elif self._state is State.HOLDING and self._row is not None:
-            if self._intake.good_in_a_row >= self._row.release and not any(self._sent):
-                self._starting, self._row, self._detail = True, None, ''
-                self._turn(Event.RELEASE)
+        elif self._state is State.HOLDING:
+            if self._intake.good_in_a_row >= self._release and not any(self._sent):
+                self._start(Event.RELEASE)
         else:
-            self._row, self._detail = row, '' if row is None else row.sentence(situation)
+            self._name(row, situation)
             self._turn(Event.SETTLE if self._progress.settling.is_home else Event.LEAVE)
+
+    def _name(self, row: Row | None, situation: Situation) -> None:
+        """Take over the reason, the sentence and the release of `row`."""
+        if row is None:
+            self._reason, self._detail, self._release = Reason.NONE, '', 0
+        else:
+            self._reason, self._detail = row.reason, row.sentence(situation)
+            self._release = row.release
+
+    def _start(self, event: Event) -> None:
+        """Let the next tick begin from rest."""
+        self._starting, self._reason, self._detail = True, Reason.NONE, ''
+        self._turn(event)
 
     def _move(self, situation: Situation, duration: float) -> None:
         """Find the twist that goes out, camera in its optical frame."""
@@ -274,7 +269,7 @@ class Controller:
             self._sent = self._outlet.braked(self._sent, duration)
         elif self._state in MOVING and not self._starting:
             slow = gate.slowdown(situation)
-            wanted = self._wanted if slow == 1.0 else [slow * part for part in self._wanted]
+            wanted = [slow * part for part in self._wanted]
             self._ratio = self._outlet.ratio(wanted)
             self._sent = self._outlet.next(self._sent, wanted,
                                            min(duration, 2.0 / self._settings.rate))
@@ -298,8 +293,8 @@ class Controller:
         self._wanted = REST
 
     def _answer(self, now: Stamp, figures: Mapping[str, float]) -> Command:
-        row, solution, camera = self._row, self._solution, self._around.camera
+        solution, camera = self._solution, self._around.camera
         frame = self._outlet.frame or ('' if camera is None else camera.frame_id)
-        return Command(Twist(self._outlet.expressed(self._sent), frame), self._state,
-                       Reason.NONE if row is None else row.reason, self._detail, now,
-                       None if solution is None else solution.view_stamp, figures)
+        return Command(Twist(self._outlet.expressed(self._sent), frame), self._state, self._reason,
+                       self._detail, now, None if solution is None else solution.view_stamp,
+                       figures)

@@ -56,16 +56,12 @@ class Row(typing.NamedTuple):
     always: bool = False
 
 
-def _good_is_fresh(s: Situation) -> bool:
-    return s.good_age <= s.watchdog.timeout
-
-
 def _dropped(reason: Reason, trigger: int) -> Callable[[Situation], int]:
     """Return the count of messages in a row dropped for `reason`; the trigger when it lasts."""
     def count(s: Situation) -> int:
         if s.bad is not reason:
             return 0
-        return s.bad_in_a_row if _good_is_fresh(s) else max(trigger, s.bad_in_a_row)
+        return s.bad_in_a_row if s.good_age <= s.watchdog.timeout else trigger
     return count
 
 

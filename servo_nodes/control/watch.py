@@ -62,7 +62,7 @@ class Intake:
         self.bad, self.bad_text, self.bad_in_a_row = Reason.NONE, '', 0
         self.good_in_a_row = 0
         self.crowded = 0.0
-        self._points: Floats | None = None
+        self._points: Floats = np.empty((0, 2))
         self._changed: Stamp = 0
         self._moved = 0.0
 
@@ -173,7 +173,7 @@ class Intake:
 
     def _fault_of_change(self, view: View, received: Stamp) -> Fault | None:
         """Notice a frozen picture under new stamps: the camera is moved, the points do not."""
-        if self._points is None or not np.array_equal(self._points, view.points_xy):
+        if not np.array_equal(self._points, view.points_xy):
             self._points, self._changed, self._moved = view.points_xy, received, 0.0
             return None
         same = age(self._changed, received)

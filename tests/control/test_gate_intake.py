@@ -38,6 +38,9 @@ def test_age_is_seconds_and_infinite_without_a_then_or_a_now():
 
 def test_a_good_view_passes_untouched_and_is_counted():
     desk = intake()
+    desk.post(whole := view(START - MS), START)
+    assert next(desk.judged(START)) is whole
+    desk = intake()
     first, second = judged(desk, (START, START + 9 * MS), (START + MS, START + 11 * MS))
     assert (first.stamp, second.stamp) == (START, START + MS)
     assert (desk.heard, desk.good, desk.image) == (
@@ -107,6 +110,12 @@ def test_equal_stamps_are_the_same_image_and_earlier_ones_go_backward():
     assert desk.bad_in_a_row == 0 and desk.bad_text == ''
 
 
+def test_two_stamps_ahead_of_the_clock_do_not_become_two_images_at_once():
+    desk = intake()
+    assert len(judged(desk, (START + 5 * MS, START), (START + 9 * MS, START))) == 1
+    assert desk.bad is Reason.IMAGE_SILENT
+
+
 def test_an_image_too_old_at_receipt_is_dropped():
     desk = intake()
     assert judged(desk, (START, START + 250 * MS))
@@ -125,11 +134,11 @@ def test_a_missing_stamp_becomes_the_time_of_receipt_and_is_counted_or_is_droppe
 
 
 def test_a_receipt_later_than_the_decision_counts_as_now_and_none_counts_as_now():
-    desk = intake()
-    desk.post(view(START), START + 99 * MS)
-    desk.post(view(START + MS), None)
-    assert len(list(desk.judged(START + 5 * MS))) == 2
-    assert desk.heard == START + 5 * MS
+    for received in (START + 99 * MS, None):
+        desk = intake()
+        desk.post(view(START), received)
+        assert len(list(desk.judged(START + 5 * MS))) == 1
+        assert desk.heard == desk.good == START + 5 * MS
 
 
 def test_the_newest_time_that_came_with_a_view_is_known_before_it_is_judged():
@@ -212,6 +221,13 @@ def test_the_band_is_a_share_of_the_smaller_side_on_all_four_sides(uv, inside):
     points += 1e-9 * np.sign(points) * (-1 if inside else 1)
     judged(desk, (START, START), points_xy=points)
     assert desk.crowded == (0.0 if inside else 1.0)
+
+
+def test_the_smaller_side_of_an_upright_image_is_its_width():
+    desk = intake()
+    desk.camera = Camera(480, 640, 600.0, 600.0, 239.5, 319.5)
+    judged(desk, (START, START), points_xy=np.full((12, 2), ((22.0 - 239.5) / 600.0, 0.0)))
+    assert desk.crowded == 0.0
 
 
 def test_the_lens_is_taken_into_account():
