@@ -10,7 +10,6 @@ from __future__ import annotations
 
 import cv2
 import numpy as np
-import numpy.typing as npt
 
 from servo_nodes.camera import Camera
 from servo_nodes.tracking import consensus, follow, homography
@@ -25,8 +24,7 @@ _LOOSE_LIKENESS, _LOOSE_PX = 0.6, 3.0
 # Brightness steps beyond this ratio between two images are taken for a change of exposure.
 _EXPOSURE_STEP = 1.12
 _FEW_SHARE = 0.7
-# Searching takes rays from a grid: the lens is smooth, and its exact inverse costs ten times as
-# much.
+# Searching takes rays from a grid: the lens is smooth, and its exact inverse costs more.
 _GRID_PX = 8
 
 
@@ -49,7 +47,7 @@ class Finder:
         self._last: Sight | None = None
         self._before: Grey | None = None
         self._brightness = 0.0
-        self._rays = _ray_grid(camera)
+        self._rays = RayGrid(camera)
 
     def find(self, grey: Grey, brightness: float) -> tuple[Sight | None, str]:
         """Return the goal in an image, and in words what was done, or why it was not found."""
@@ -68,7 +66,7 @@ class Finder:
         reference, camera, threshold = self._reference, self._camera, self._options.threshold_px
         keypoints = self._describer.describe(grey)
         pairs = self._describer.match(reference.keypoints, keypoints)
-        xy = self._near_rays(keypoints.uv[pairs.second])
+        xy = self._rays.normalised(keypoints.uv[pairs.second])
         goal_xy = reference.keypoints_xy[pairs.first]
         sure = np.isfinite(xy[:, 0])
         xy, goal_xy = xy[sure], goal_xy[sure]
@@ -87,15 +85,6 @@ class Finder:
             sight = follow.verified(reference, camera, grey, sight.matrix, self._limits, rounds=3)
         doubt = self._doubt(sight, self._options.acquire_points)
         return (None, f'goal not found: {doubt}') if doubt else (sight, 'found')
-
-    def _near_rays(self, uv: Floats) -> Floats:
-        """Return normalised coordinates (N, 2) of pixels, to a few hundredths of a pixel."""
-        if not len(uv):
-            return np.empty((0, 2))
-        u, v = (uv.T / _GRID_PX).astype(np.float32)
-        found = cv2.remap(self._rays, u[None], v[None], cv2.INTER_LINEAR,
-                          borderMode=cv2.BORDER_REPLICATE)
-        return np.asarray(found, dtype=np.float64).reshape(-1, 2)
 
     def _followed(self, grey: Grey, brightness: float) -> Sight | None:
         if self._last is None or self._before is None:
@@ -130,12 +119,23 @@ class Finder:
         return ''
 
 
-def _ray_grid(camera: Camera) -> npt.NDArray[np.float32]:
-    """Return normalised coordinates (rows, columns, 2) at every `_GRID_PX`-th pixel."""
-    u = np.arange(0, camera.width + _GRID_PX, _GRID_PX)
-    v = np.arange(0, camera.height + _GRID_PX, _GRID_PX)
-    grid = np.stack(np.meshgrid(u, v), axis=-1).astype(np.float64)
-    return camera.normalised_from_pixels(grid).astype(np.float32)
+class RayGrid:
+    """The inverse of a lens, read from a grid: to a fifth of a pixel, in a tenth of the time."""
+
+    def __init__(self, camera: Camera) -> None:
+        u = np.arange(0, camera.width + _GRID_PX, _GRID_PX)
+        v = np.arange(0, camera.height + _GRID_PX, _GRID_PX)
+        grid = np.stack(np.meshgrid(u, v), axis=-1).astype(np.float64)
+        self._rays = camera.normalised_from_pixels(grid).astype(np.float32)
+
+    def normalised(self, uv: Floats) -> Floats:
+        """Return normalised coordinates (N, 2) of pixels; NaN without a sure inverse."""
+        if not len(uv):
+            return np.empty((0, 2))
+        u, v = (uv.T / _GRID_PX).astype(np.float32)
+        found = cv2.remap(self._rays, u[None], v[None], cv2.INTER_LINEAR,
+                          borderMode=cv2.BORDER_REPLICATE)
+        return np.asarray(found, dtype=np.float64).reshape(-1, 2)
 
 
 def _exposed_as(grey: Grey, other: Grey) -> Grey:

@@ -32,7 +32,7 @@ Index = npt.NDArray[np.intp]
 WINDOW, LEVELS = (21, 21), 3
 _STOP = (_cv.TERM_CRITERIA_COUNT | _cv.TERM_CRITERIA_EPS, 20, 0.01)
 _MOST_RETURN_PX, _AGREE_PX, _LEAST_CARRIED = 0.5, 2.0, 6
-_FLOOR_PX = 0.03
+_FLOOR_PX, _NEAR_PX = 0.03, 0.5
 
 
 @dataclass(frozen=True, eq=False)
@@ -122,7 +122,7 @@ def verified(reference: Reference, camera: Camera, grey: Grey, matrix: Floats, l
     inverse = _inverse_2x2(lens[alike])
     xy = _normalised(camera, uv, guess[alike], guess_xy[alike], inverse)
     goal_xy = reference.xy[kept]
-    fit = homography.robust_fit(goal_xy, xy, matrix, floor=_FLOOR_PX / camera.fx, rounds=2)
+    fit = homography.robust_fit(goal_xy, xy, matrix, floor=_FLOOR_PX / camera.fx, rounds=1)
     if fit is None:
         return None
     good = np.flatnonzero((fit.residuals * camera.fx <= limits.residual_px) & (fit.weights > 0))
@@ -139,10 +139,13 @@ def _normalised(camera: Camera, uv: Floats, near_uv: Floats, near_xy: Floats,
                 inverse: Floats) -> Floats:
     """Return normalised coordinates of pixels that lie a few px from known ones.
 
-    Two steps of Newton's method with the inverse Jacobian of the lens at those: what is left is of
-    the third order in the distance over the focal length, far below a thousandth of a pixel.
+    One step of Newton's method with the inverse Jacobian of the lens at those, and a second one
+    when they moved far: what is left is below a thousandth of a pixel.
     """
-    xy = near_xy + (inverse @ (uv - near_uv)[:, :, None])[:, :, 0]
+    moved = uv - near_uv
+    xy = near_xy + (inverse @ moved[:, :, None])[:, :, 0]
+    if np.abs(moved).max() < _NEAR_PX:
+        return typing.cast(Floats, xy)
     missing = uv - camera.pixels_from_normalised(xy)
     return typing.cast(Floats, xy + (inverse @ missing[:, :, None])[:, :, 0])
 

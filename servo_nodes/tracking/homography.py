@@ -182,5 +182,7 @@ def pixel_matrix(matrix: Floats, goal_camera: Camera, camera: Camera) -> Floats:
 
     Exact without distortion; else the pinhole parts alone.
     """
-    result = camera.matrix @ matrix @ np.linalg.inv(goal_camera.matrix)
+    fx, fy, cx, cy = goal_camera.fx, goal_camera.fy, goal_camera.cx, goal_camera.cy
+    inverse = np.array([[1 / fx, 0, -cx / fx], [0, 1 / fy, -cy / fy], [0, 0, 1.0]])
+    result = camera.matrix @ matrix @ inverse
     return typing.cast(Floats, result / result[2, 2])

@@ -128,11 +128,11 @@ class MarkerFinder:
         corners = self._markers.corners(grey)
         xy = camera.normalised_from_pixels(corners.uv)
         depths = self._markers.depths(corners, xy)
-        known, mine, theirs = np.intersect1d(
+        _, mine, theirs = np.intersect1d(
             reference.ids, corners.ids, assume_unique=True, return_indices=True)
-        theirs = theirs[np.isfinite(xy[theirs, 0])]
-        mine = np.flatnonzero(np.isin(reference.ids, corners.ids[theirs]))
-        if len(known) < 4 or len(mine) < 4:
+        sure = np.isfinite(xy[theirs, 0])
+        mine, theirs = mine[sure], theirs[sure]
+        if len(mine) < 4:
             return None, f"goal not found: {len(corners) // 4} markers seen, none of the goal's"
         xy, goal_xy = xy[theirs], reference.xy[mine]
         lens = np.linalg.inv(camera.pixel_jacobian(xy)).astype(np.float64)

@@ -9,10 +9,12 @@ import numpy as np
 import pytest
 
 from servo_nodes import motion
+from servo_nodes.camera import Camera
 from servo_nodes.settings import settings_from_mapping
+from servo_nodes.tracking.finder import RayGrid
 from servo_nodes.tracking.tracker import Tracker, TrackerSettings
 from servo_nodes.values import Calibration, Image, View
-from tests.tracking.stage import LENSES, Stage, photograph, pose_facing
+from tests.tracking.stage import LENSES, Stage, calibration_of, photograph, pose_facing
 
 HOME = pose_facing(0.42)
 AWAY = pose_facing(0.5, shift=(0.05, -0.04), turn_deg=(8.0, -6.0, 20.0))
@@ -66,6 +68,16 @@ def test_points_and_depths_are_true_through_every_lens(lens: str) -> None:
         assert np.allclose(view.depths, depths, rtol=1e-3)
         assert np.allclose(view.goal_depths, 0.42, rtol=1e-9)
         assert view.weights.min() > 0
+
+
+@pytest.mark.parametrize('lens', sorted(LENSES))
+def test_the_rays_of_a_search_are_those_of_the_lens(lens: str) -> None:
+    camera = Camera.from_calibration(calibration_of(lens))
+    uv = np.random.default_rng(0).uniform((0, 0), (639, 479), (500, 2))
+    xy = RayGrid(camera).normalised(uv)
+    error = np.linalg.norm(camera.pixels_from_normalised(xy) - uv, axis=1)
+    assert error.max() < 0.25
+    assert RayGrid(camera).normalised(np.empty((0, 2))).shape == (0, 2)
 
 
 def test_the_status_tells_an_overlay_where_points_are(coins: Stage) -> None:
