@@ -34,7 +34,7 @@ from servo_nodes.values import Floats
 Field: typing.TypeAlias = npt.NDArray[np.float32]
 
 MOST_SAMPLES = 25
-_FAR_AWAY = 1e6
+_MOST_REFLECTIONS = 50
 _NEAREST = 1e-3
 
 
@@ -68,7 +68,7 @@ def rays_of(camera: Camera) -> Rays:
     grid = np.stack(np.meshgrid(np.arange(camera.width), np.arange(camera.height)), axis=-1)
     xy = camera.normalised_from_pixels(grid)
     lost: npt.NDArray[typing.Any] = np.isnan(xy.sum(axis=-1))
-    xy[lost] = _FAR_AWAY
+    xy[lost] = 0.0
     return Rays(xy.astype(np.float32), lost if np.any(lost) else None)
 
 
@@ -160,9 +160,13 @@ def _drawn(placed: Sequence[Placed], camera: Camera, offset: float, readout: flo
 def _backdrop(one: Placed, camera: Camera, offset: float, readout: float, grey: bool) -> Pixels:
     level = one.face.texture.level_for(_footprint(one, camera), grey=grey)
     inverse = _inverses(one, camera, offset, readout, None)
-    image = _looked_up(level, _texels(level, inverse, camera, None))
-    if not _is_all_ahead(inverse, camera):
-        image[_depth_rows(inverse, camera, None) <= 0] = 0
+    texels = _texels(level, inverse, camera, None)
+    if _is_all_near(level, inverse, camera):
+        return _looked_up(level, texels)
+    # OpenCV mirrors step by step, without end for what lies near the horizon of the plane.
+    far = _MOST_REFLECTIONS * max(level.pixels.shape[:2])
+    image = _looked_up(level, np.nan_to_num(np.clip(texels, -far, far)))
+    image[_depth_rows(inverse, camera, None) <= 0] = 0
     return image
 
 
@@ -243,12 +247,14 @@ def _footprint(one: Placed, camera: Camera) -> float:
     return float(np.sqrt(abs(np.linalg.det(jacobian)) / (camera.fx * camera.fy)))
 
 
-def _is_all_ahead(inverse: Floats, camera: Camera) -> bool:
-    """Whether every pixel's ray meets the plane in front of the camera."""
+def _is_all_near(level: Level, inverse: Floats, camera: Camera) -> bool:
+    """Whether every ray meets the plane, and not too far out; the border tells for the rest."""
     xy = rays_of(camera).xy
     border = np.concatenate([xy[0], xy[-1], xy[:, 0], xy[:, -1]])
-    last = inverse[..., 2, :].reshape(-1, 3)
-    return bool(np.min(border @ last[:, :2].T + last[:, 2]) > 0)
+    seen = np.column_stack([border, np.ones(len(border))]) @ np.swapaxes(
+        level.texels_from_metres @ inverse, -1, -2)
+    far = _MOST_REFLECTIONS * max(level.pixels.shape[:2])
+    return bool((np.abs(seen[..., :2]) < far * seen[..., 2:]).all())
 
 
 def _outline(one: Placed, camera: Camera, dt: float) -> Floats:

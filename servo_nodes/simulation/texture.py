@@ -2,10 +2,10 @@
 # SPDX-License-Identifier: Apache-2.0
 """A picture with a size in metres, sampled without aliasing from any distance.
 
-The picture is kept at sizes that fall by sqrt(2), each softened before it is made smaller; an
-image takes the one whose texels are as large as its own pixels on the surface, so that what it
-shows is neither aliased nor blurred by more than a real lens does. Texel (0, 0) is the centre of
-the first texel, at every size.
+The picture is kept, softened, at sizes that fall by sqrt(2), each softened before it is made
+smaller; an image takes the one whose texels are as large as its own pixels on the surface, so
+that what it shows is neither aliased nor blurred by more than a real lens does. Texel (0, 0) is
+the centre of the first texel, at every size.
 """
 
 from __future__ import annotations
@@ -55,13 +55,14 @@ class Texture:
         square = width * pixels.shape[0] / pixels.shape[1]
         self.height = square if height is None else float(height)
         self.pitch = width / pixels.shape[1]
-        colour = pixels if pixels.ndim == 3 else cv2.cvtColor(pixels, cv2.COLOR_GRAY2BGR)
-        grey = pixels if pixels.ndim == 2 else cv2.cvtColor(pixels, cv2.COLOR_BGR2GRAY)
-        self._levels = {False: [self._level(colour)], True: [self._level(grey)]}
+        self._pixels = pixels
+        self._levels: dict[bool, list[Level]] = {False: [], True: []}
 
     def level_for(self, footprint: float, *, grey: bool) -> Level:
         """Return the size for image pixels that cover `footprint`, m, on the surface."""
         levels = self._levels[grey]
+        if not levels:
+            levels.append(self._level(_softened(_converted(self._pixels, grey))))
         wanted = max(0, math.floor(2 * math.log2(max(1.2 * footprint / self.pitch, 1.0))))
         while len(levels) <= wanted and min(levels[-1].pixels.shape[:2]) >= 2 * _LEAST_SIDE:
             levels.append(self._level(_smaller(levels[-1].pixels)))
@@ -90,8 +91,17 @@ class Face:
     endless: bool = False
 
 
+def _converted(pixels: Pixels, grey: bool) -> Pixels:
+    if grey == (pixels.ndim == 2):
+        return pixels
+    return cv2.cvtColor(pixels, cv2.COLOR_BGR2GRAY if grey else cv2.COLOR_GRAY2BGR)
+
+
+def _softened(pixels: Pixels) -> Pixels:
+    return cv2.GaussianBlur(pixels, (0, 0), _SOFTENING, borderType=cv2.BORDER_REFLECT_101)
+
+
 def _smaller(pixels: Pixels) -> Pixels:
     high, wide = pixels.shape[:2]
-    soft = cv2.GaussianBlur(pixels, (0, 0), _SOFTENING, borderType=cv2.BORDER_REFLECT_101)
-    return cv2.resize(soft, (round(wide / _STEP), round(high / _STEP)),
+    return cv2.resize(_softened(pixels), (round(wide / _STEP), round(high / _STEP)),
                       interpolation=cv2.INTER_LINEAR)
