@@ -19,7 +19,7 @@ from servo_nodes.values import SECOND_NS, Floats, Stamp
 MOST_PATHS = 40
 _SILENCE = 6.0
 _BINS = 1000
-_WIDTH_IN, _STRIP_IN, _PANEL_IN = 9.2, 0.62, 1.22
+_WIDTH_IN, _STRIP_IN, _PANEL_IN = 9.2, 0.76, 1.22
 _LINES: tuple[typing.Any, ...] = ('-', (0, (5, 1.6)), (0, (1.2, 1.6)))
 
 
@@ -148,7 +148,7 @@ def _second(record: Record, stamp: Stamp) -> float:
 
 def _strip(axis: typing.Any, record: Record) -> None:
     """Draw the states as one coloured strip, each with its word, reasons above it."""
-    axis.set(ylim=(-0.05, 2.1), yticks=[])
+    axis.set(ylim=(-0.05, 2.7), yticks=[])
     axis.grid(False)
     axis.spines[['left', 'bottom']].set_visible(False)
     axis.tick_params(axis='x', length=0)
@@ -161,16 +161,23 @@ def _strip(axis: typing.Any, record: Record) -> None:
         if (span.end - span.start) / whole > 0.012 * len(state):
             axis.text(start + span.seconds / 2, 0.46, state, ha='center', va='center',
                       color=palette.text_on(colour), fontsize=8.5)
-    free = -math.inf
+    _reasons(axis, record, whole / SECOND_NS)
+
+
+def _reasons(axis: typing.Any, record: Record, seconds: float) -> None:
+    """Write the reason of each stop above the strip, in two rows; what has no room is left out."""
+    free = [-math.inf, -math.inf]
     for stop in stops(record):
         start = _second(record, stop.span.start)
         label = f'{stop.span.event.reason.replace("_", " ")} at {start:.2f} s'
-        wide = whole / SECOND_NS * 0.007 * len(label)
-        axis.plot([start, start], [1, 1.3], color=palette.INK, linewidth=0.8)
-        left = min(start, whole / SECOND_NS - wide)
-        if left >= free:
-            axis.text(left, 1.25, label, ha='left', va='bottom', fontsize=8)
-            free = left + wide
+        wide = 0.007 * seconds * len(label)
+        left = min(start, seconds - wide)
+        row = next((row for row in (0, 1) if left >= free[row]), None)
+        top = 1.15 if row is None else 1.25 + 0.75 * row
+        axis.plot([start, start], [1, top], color=palette.INK, linewidth=0.8)
+        if row is not None:
+            axis.text(left, top, label, ha='left', va='bottom', fontsize=8)
+            free[row] = left + wide
 
 
 def _stops(axis: typing.Any, record: Record) -> None:

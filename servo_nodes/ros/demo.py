@@ -140,7 +140,8 @@ def _demonstrate(options: argparse.Namespace, words: Words) -> int:
     options.out.mkdir(parents=True, exist_ok=True)
     rng = random.Random()
     domain = free_domain(rng) if options.domain is None else options.domain
-    environment = isolated(os.environ, domain)
+    environment = isolated(os.environ, domain) | {
+        'ROS_LOG_DIR': str((options.out / 'logs' / 'ros').resolve())}
     os.environ.clear()
     os.environ.update(environment)
     from servo_nodes.ros.demo_run import Start

@@ -22,7 +22,9 @@ HOME_DISTANCE_M = 0.42
 READY_S, SEEN_S, LINGER_S = 30.0, 10.0, 1.0
 MOST_MM, MOST_DEG = 0.4, 0.06
 FIRST_FAULT_S, FAULT_S = 0.8, 1.0
-FAULTS: Mapping[str, Mapping[str, object]] = {
+# A page of many stops must still be light enough to mail.
+MOST_PICTURED = 5
+FAULTS: Mapping[str, Mapping[str, bool | float]] = {
     'occlusion': {'faults.black': 1.0}, 'stall': {'faults.drop': 1.0},
     'freeze': {'faults.freeze': True}}
 
@@ -192,9 +194,10 @@ class Run:
             self._settled = None
         if watch.state in (State.HOLDING, State.FAULTED):
             self.outcome.stops += 1
-            watch.keep_picture('stop', 'as it stopped')
-            self._due.append((now + SECOND_NS // 2, 'half a second later'))
-        elif before is State.HOLDING:
+            if self.outcome.stops <= MOST_PICTURED:
+                watch.keep_picture('stop', 'as it stopped')
+                self._due.append((now + SECOND_NS // 2, 'half a second later'))
+        elif before is State.HOLDING and self.outcome.stops <= MOST_PICTURED:
             watch.keep_picture('stop', 'as it moved on')
         reason = '' if watch.reason == 'none' else f' ({watch.reason}: {watch.detail})'
         if watch.state is not None:

@@ -111,7 +111,7 @@ class Watch:
     def ask(self, kind: typing.Any, name: str, request: typing.Any,
             seconds: float = 5.0) -> typing.Any:
         """Return a service's response; `Trouble` when there is none in time."""
-        client = self.node.create_client(kind, name)
+        client: typing.Any = self.node.create_client(kind, name)
         try:
             if not self.spin_until(client.service_is_ready, seconds):
                 raise Trouble(f'{name}: expected this service within {seconds:g} s, got none')
@@ -225,7 +225,8 @@ class Watch:
             pixels = (pixels >> 8).astype(np.uint8)
         if not plain:
             pixels = self._drawn(pixels)
-        self.recorder.pictures.append(Picture(name, image.stamp, caption, encoded(pixels)))
+        data = encoded(pixels, most_width=480 if name == 'stop' else 960)
+        self.recorder.pictures.append(Picture(name, image.stamp, caption, data))
 
     def _drawn(self, pixels: typing.Any) -> typing.Any:
         now = goal = np.empty((0, 2))
