@@ -80,9 +80,10 @@ class Finder:
             return None, (f'goal not found: {agreeing} of {len(xy)} keypoints agree, '
                           'no more than chance would')
         loose = Limits(_LOOSE_LIKENESS * self._limits.likeness, _LOOSE_PX)
-        sight = follow.verified(reference, camera, grey, matrix, loose, rounds=3)
+        sight = follow.verified(reference, camera, grey, matrix, loose, rounds=3, fits=4)
         if sight is not None:
-            sight = follow.verified(reference, camera, grey, sight.matrix, self._limits, rounds=3)
+            sight = follow.verified(reference, camera, grey, sight.matrix, self._limits, rounds=3,
+                                    fits=4)
         doubt = self._doubt(sight, self._options.acquire_points)
         return (None, f'goal not found: {doubt}') if doubt else (sight, 'found')
 

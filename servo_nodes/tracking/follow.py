@@ -102,10 +102,11 @@ def carried(reference: Reference, camera: Camera, last: Sight, before: Grey,
 
 
 def verified(reference: Reference, camera: Camera, grey: Grey, matrix: Floats, limits: Limits, *,
-             rounds: int) -> Sight | None:
+             rounds: int, fits: int = 1) -> Sight | None:
     """Register the goal's points where `matrix` puts them and keep those that agree.
 
-    Returns None when fewer than four do, or when what they agree on is no view a camera can have.
+    `rounds` of registration at most, `fits` of the common model: one is enough from a good guess.
+    Returns None when fewer than four agree, or on what is no view a camera can have.
     """
     guess_xy, change = homography.mapped_and_jacobian(matrix, reference.xy)
     guess, lens = camera.pixels_and_jacobian(guess_xy)
@@ -122,7 +123,7 @@ def verified(reference: Reference, camera: Camera, grey: Grey, matrix: Floats, l
     inverse = _inverse_2x2(lens[alike])
     xy = _normalised(camera, uv, guess[alike], guess_xy[alike], inverse)
     goal_xy = reference.xy[kept]
-    fit = homography.robust_fit(goal_xy, xy, matrix, floor=_FLOOR_PX / camera.fx, rounds=1)
+    fit = homography.robust_fit(goal_xy, xy, matrix, floor=_FLOOR_PX / camera.fx, rounds=fits)
     if fit is None:
         return None
     good = np.flatnonzero((fit.residuals * camera.fx <= limits.residual_px) & (fit.weights > 0))

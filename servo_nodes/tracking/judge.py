@@ -29,7 +29,7 @@ from servo_nodes.values import Floats
 AXES = ('x', 'y', 'z', 'rx', 'ry', 'rz')
 MOST_SATURATED, LEAST_SPREAD = 0.2, 0.08
 MOST_BLUR, MOST_SCATTER, MOST_TURN = 0.93, 5e-4, np.radians(0.05)
-REPEATS_SHARE = 0.5
+REPEATS_SHARE = 0.35
 HOPELESS_SCATTER, HOPELESS_TURN = 5e-3, np.radians(0.5)
 _LAPLACIAN = np.array([[1, -2, 1], [-2, 4, -2], [1, -2, 1]], dtype=np.float32)
 _MAD = 1.482602219
