@@ -15,6 +15,8 @@ ROOT = Path(__file__).resolve().parent.parent
 
 # The same examples on every run; no clock decides whether a test passes.
 settings.register_profile('house', derandomize=True, deadline=None, max_examples=100)
+# For the second and third set of releases: `pytest --hypothesis-profile=brief`.
+settings.register_profile('brief', derandomize=True, deadline=None, max_examples=20)
 settings.load_profile('house')
 
 # A test must never reach a robot: neither another machine nor another run on this one.
