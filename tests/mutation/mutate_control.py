@@ -15,8 +15,8 @@ from __future__ import annotations
 
 import argparse
 import ast
-import copy
 import dataclasses
+import functools
 import importlib.abc
 import importlib.util
 import os
@@ -62,24 +62,23 @@ class Mutant:
         return f'{self.module}:{self.name}'
 
 
-class _At(ast.NodeTransformer):
-    """Replaces the one node that was marked."""
-
-    def __init__(self, replacement: ast.AST | None) -> None:
-        self.replacement = replacement
-
-    def visit(self, node: ast.AST) -> ast.AST | None:
-        """Return the replacement for the marked node."""
-        if getattr(node, 'marked', False):
-            return self.replacement
-        return super().generic_visit(node)
-
-
 def _changed(tree: ast.Module, node: ast.AST, replacement: ast.AST | None) -> str:
-    node.marked = True  # type: ignore[attr-defined]
-    other = copy.deepcopy(tree)
-    del node.marked  # type: ignore[attr-defined]
-    return ast.unparse(ast.fix_missing_locations(_At(replacement).visit(other)))
+    """Return the source with `node` replaced, or left out; the tree is as before afterwards."""
+    for parent in ast.walk(tree):
+        for field, value in ast.iter_fields(parent):
+            if value is node:
+                new: object = replacement
+            elif isinstance(value, list) and any(item is node for item in value):
+                place = next(k for k, item in enumerate(value) if item is node)
+                new = value[:place] + [replacement] * (replacement is not None) + value[place + 1:]
+            else:
+                continue
+            setattr(parent, field, new)
+            try:
+                return ast.unparse(ast.fix_missing_locations(tree))
+            finally:
+                setattr(parent, field, value)
+    raise ValueError(f'expected a node of the tree, got {ast.dump(node)}')
 
 
 def _functions(tree: ast.Module) -> Iterator[ast.FunctionDef]:
@@ -121,6 +120,7 @@ def _words(node: ast.AST) -> str:
     return f'{"if " if isinstance(node, ast.If) else ""}{ast.unparse(head)[:70]}'
 
 
+@functools.cache
 def mutants(module: str) -> list[Mutant]:
     """Return every mutant of a module, each with a name that is its own."""
     tree = ast.parse((ROOM / f'{module}.py').read_text(encoding='utf-8'))
