@@ -119,8 +119,6 @@ class Volume:
             try:
                 for connection, time, data in reader.messages(wanted):
                     yield Found(int(time), str(connection.topic), str(connection.msgtype), data)
-            except GeneratorExit:
-                raise
             except Exception as error:
                 raise CutOff(_words(error)) from error
 

@@ -144,7 +144,9 @@ def _record(bag: Bag, run: _Run, tracker: Tracker | None, choice: Choice,
             findings: Sequence[Finding], mode: str, notes: Sequence[str]) -> Record:
     log, ok = run.log, passed(findings)
     failed = [finding for finding in findings if finding.ok is False]
-    headline = ('The replay passes' if ok else f'The replay fails: {failed[0].text}')
+    headline = ('The replay passes' if ok else
+                f'The replay fails: {", ".join(finding.name for finding in failed)}')
+    words = [f'{finding.text[:1].upper()}{finding.text[1:]}.' for finding in failed]
     series = log.series()
     if log.first is not None:
         caps = choice.controller.caps
@@ -156,7 +158,7 @@ def _record(bag: Bag, run: _Run, tracker: Tracker | None, choice: Choice,
     camera = run.camera
     paths: list[Path] = run.ways.paths(camera)
     size = run.album.size if any(run.album.size) or camera is None else camera.size
-    return Record(f'Replay of {bag.path.name}', Verdict(ok, headline, CAUTION),
+    return Record(f'Replay of {bag.path.name}', Verdict(ok, headline, ' '.join([*words, CAUTION])),
                   _facts(bag, run, choice, findings, mode, notes), series, tuple(log.events),
                   tuple(pictures), tuple(paths), size)
 

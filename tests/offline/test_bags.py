@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import shutil
 import sqlite3
+import sys
 import tracemalloc
 
 import numpy as np
@@ -293,3 +294,9 @@ def test_a_long_recording_streams(tmp_path, storage):
 def test_a_message_that_unpacks_to_a_hostile_size_is_bounded():
     packed = bags_salvage.zstd_module().compress(np.zeros(50_000_000, np.uint8).tobytes())
     assert len(bags_salvage.zstd_prefix(packed, 1000)) == 1000
+
+
+def test_without_the_package_that_reads_recordings_the_remedy_is_told(tmp_path, monkeypatch):
+    monkeypatch.setitem(sys.modules, 'rosbags.rosbag2.storage_mcap', None)
+    with pytest.raises(BagError, match=r'expected the package rosbags .*pip install'):
+        Bag(tmp_path)

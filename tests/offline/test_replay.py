@@ -22,7 +22,9 @@ from servo_nodes.offline.replay_events import Script
 from servo_nodes.offline.replay_goal import Request
 from servo_nodes.offline.replay_run import replayed
 from servo_nodes.offline.replay_settings import Choice
+from servo_nodes.report import page
 from servo_nodes.report import record as records
+from servo_nodes.report.drawing import MissingExtra
 from servo_nodes.tracking.options import TrackerSettings
 from tests.offline import recordings
 from tests.offline.recordings import START
@@ -395,3 +397,14 @@ def test_a_recording_that_lost_commands_says_so(tmp_path, capsys, plain):
     folder = recordings.written(tmp_path / 'run', kept)
     _, result = replay(capsys, folder)
     assert any('were not recorded' in note for note in result['notes'])
+
+
+def test_without_matplotlib_everything_but_the_page_is_left(tmp_path, capsys, plain, monkeypatch):
+    def missing(record, path):
+        raise MissingExtra('expected matplotlib, got none')
+    monkeypatch.setattr(page, 'write', missing)
+    folder = recordings.written(tmp_path / 'run', plain.messages)
+    assert main([str(folder), '--out', str(tmp_path / 'out')]) == 0
+    assert 'no page: expected matplotlib' in capsys.readouterr().err
+    assert sorted(path.name for path in (tmp_path / 'out').iterdir()) == [
+        'junit.xml', 'record.json', 'verdict.json']
