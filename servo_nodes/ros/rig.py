@@ -32,7 +32,8 @@ from servo_nodes.values import SECOND_NS
 NAMESPACE = '/servo'
 # The rclpy of Kilted, whose middleware warns of the variable's old name.
 RENAMED_IN = 9
-ASK_AGAIN_S = 1.0
+ASK_AGAIN_S = 2.0
+FIND_AGAIN_S = 5.0
 ROOT = pathlib.Path(__file__).resolve().parents[2]
 
 
@@ -227,17 +228,17 @@ class Rig:
 
         A killed server stays in the graph for a while; what it does not answer is asked again.
         """
-        if name not in self._clients:
-            self._clients[name] = self.node.create_client(kind, name)
-        client, end = self._clients[name], time.monotonic() + timeout
+        end = time.monotonic() + timeout
         while True:
-            self.until(client.service_is_ready, timeout, what=f'service {name}')
-            future = client.call_async(kind.Request() if request is None else request)
+            client = self._clients.get(name) or self.node.create_client(kind, name)
+            self._clients[name] = client
             try:
+                self.until(client.service_is_ready, FIND_AGAIN_S, what=f'service {name}')
+                future = client.call_async(kind.Request() if request is None else request)
                 self.until(future.done, ASK_AGAIN_S, what=f'an answer of {name}')
                 return future.result()
             except TimeoutError:
-                client.remove_pending_request(future)
+                self.node.destroy_client(self._clients.pop(name))
                 if time.monotonic() > end:
                     raise
 
