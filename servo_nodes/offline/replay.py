@@ -42,7 +42,7 @@ class Progress:
         wall = time.monotonic()
         if wall - self._said >= _PROGRESS_S:
             self._said = wall
-            done = (now - self._start) / SECOND_NS
+            done = max(0, now - self._start) / SECOND_NS
             print(f'{done:9.1f} s of {self._length / SECOND_NS:.1f} s', file=sys.stderr,
                   flush=True)
 
