@@ -2,7 +2,7 @@
 # SPDX-License-Identifier: Apache-2.0
 """Arbitrary orders of events: what the controller promises for all of them.
 
-The machine below is more than ten thousand steps of hypothesis; the walk is another twelve
+The machine below is more than ten thousand steps of hypothesis; the walk is another six
 thousand of a seeded generator, played twice.
 """
 
@@ -276,13 +276,13 @@ def walked(seed, steps):
     return it.log
 
 
-def test_the_same_log_twice_gives_the_same_commands_twice_over_twelve_thousand_ticks():
-    first, again = walked(7, 12_000), walked(7, 12_000)
+def test_the_same_log_twice_gives_the_same_commands_twice_over_six_thousand_ticks():
+    first, again = walked(7, 6_000), walked(7, 6_000)
     assert first == again
     states = [entry[0] for entry in first]
     assert set(states) == set(State)
     moving = [entry for entry in first if np.frombuffer(entry[3]).any()]
-    assert len(moving) > 1_000
+    assert len(moving) > 500
 
 
 def test_a_camera_with_any_lens_is_taken():
