@@ -37,6 +37,15 @@ def test_with_everything_in_place_it_stands_by_without_a_reason_and_shows_the_er
     assert command.twist.frame_id == CAMERA.frame_id and not command.twist.vector.any()
 
 
+def test_a_loop_that_is_off_solves_once_for_each_view_and_one_that_is_on_at_each_tick():
+    loop = Loop()
+    loop.tick(9)
+    assert len(loop.servo.solved) == 3
+    assert loop.controller.engage(True).ok
+    loop.tick(9)
+    assert len(loop.servo.solved) == 3 + 9
+
+
 def test_it_engages_on_a_good_view_even_before_the_first_tick():
     loop = Loop()
     assert refused(loop).startswith('features_silent: no features so far')

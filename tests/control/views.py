@@ -53,6 +53,7 @@ class Asking:
         self.settings = None
         self.twist, self.error_px, self.changes = twist, error_px, changes
         self.raises = None
+        self.solved = []
         self.began, self.recorded, self.seen, self.rests = [], [], [], 0
 
     def calibrate(self, camera):
@@ -74,6 +75,7 @@ class Asking:
         self.recorded.append((now, np.array(twist)))
 
     def solve(self, now):
+        self.solved.append(now)
         if self.raises is not None:
             raise self.raises
         if not self.seen:
