@@ -9,7 +9,7 @@ from setuptools.command.install import install
 
 PACKAGE = 'servo_nodes'
 
-NODES = ('tracker', 'controller', 'simulator')
+NODES = ('tracker', 'controller', 'simulator', 'proxy')
 TOOLS = {'servo_demo': 'ros.demo', 'servo_drill': 'ros.drill', 'servo_bench': 'offline.bench',
          'servo_replay': 'offline.replay'}
 
