@@ -12,7 +12,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from servo_nodes import motion
-from servo_nodes.control.progress import Growth, Settling, Stall
+from servo_nodes.control.progress import Growth, Progress, Settling, Stall
 from servo_nodes.control.travel import Leash
 from tests.control.views import START, TICK, settings
 
@@ -161,6 +161,26 @@ def test_time_that_runs_back_starts_the_average_anew():
     settling = Settling()
     settling.add((1.0,) * 6, 50.0, START + 500 * TICK, SETTLE)
     assert settled((0,) * 6, settling=settling) == pytest.approx(0.5)
+
+
+def spent():
+    progress = Progress()
+    progress.growth.ratio, progress.stall.seconds, progress.settling.is_home = 2.0, 9.0, True
+    progress.leash.add((0.1, 0, 0, 0, 0, 0), 1.0)
+    return progress
+
+
+def test_a_start_from_rest_judges_anew_but_only_a_new_engagement_ties_the_leash_anew():
+    progress = spent()
+    progress.begin()
+    assert (progress.growth.ratio, progress.stall.seconds, progress.settling.is_home) == (
+        1.0, 0.0, False)
+    assert progress.leash.travelled == pytest.approx(0.1)
+    progress = spent()
+    progress.restart()
+    assert (progress.growth.ratio, progress.stall.seconds, progress.settling.is_home) == (
+        1.0, 0.0, False)
+    assert progress.leash.travelled == 0.0
 
 
 TWISTS = st.lists(st.tuples(*[st.floats(-0.5, 0.5)] * 6), min_size=1, max_size=60)
