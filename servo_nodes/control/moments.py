@@ -10,6 +10,14 @@ for a set of points, on a plane parallel to the image at depth Z (Chaumette 2004
     xg     [-1/Z, 0, xg/Z, xg yg + k n11, -(1 + xg^2 + k n20),  yg]
     yg     [0, -1/Z, yg/Z, 1 + yg^2 + k n02, -(xg yg + k n11), -xg]
 
+The orientation alpha = atan2(2 n11, D) / 2, D = n20 - n02, changes with
+alpha' = (n11' D - n11 D') / (D^2 + 4 n11^2). While the plane stays parallel no translation turns
+it, a roll turns it by -1, and, with K = 5 for a region and 2 for points, wx and wy turn it by the
+following over D^2 + 4 n11^2:
+
+    wx   K (n12 D + n11 (n03 - n21)) + xg (n02 D - 2 n11^2) + yg n11 (n20 + n02)
+    wy  -K (n21 D + n11 (n12 - n30)) + xg n11 (n20 + n02) - yg (n20 D + 2 n11^2)
+
 The normalised set a_n = Z* sqrt(a*/a), x_n = a_n xg, y_n = a_n yg has the translation block
 -(a_n/Z) I: near the goal each of them is moved by one velocity of the camera.
 """
@@ -78,6 +86,35 @@ def of_points(points_xy: npt.ArrayLike, weights: npt.ArrayLike | None = None) ->
                    False)
 
 
+def thirds_of_polygon(corners: npt.ArrayLike) -> Floats:
+    """Return n30, n21, n12, n03, (..., 4), of the region inside polygons (..., N, 2).
+
+    Centred third moments divided by the area. The fan of triangles from the centre to the edges
+    reduces each to an integral along the edges, of a cubic, for which Simpson's rule is exact.
+    """
+    corners = np.asarray(corners, dtype=np.float64)
+    start = corners - of_polygon(corners).centre[..., None, :]
+    end = np.roll(start, -1, axis=-2)
+    cross = start[..., 0] * end[..., 1] - end[..., 0] * start[..., 1]
+    along = (_cubes(start) + 4 * _cubes(0.5 * (start + end)) + _cubes(end)) / 6
+    total = (cross[..., None] * along).sum(-2) / 5
+    return typing.cast(Floats, total / (0.5 * cross.sum(-1, keepdims=True)))
+
+
+def thirds_of_points(points_xy: npt.ArrayLike, weights: npt.ArrayLike | None = None) -> Floats:
+    """Return n30, n21, n12, n03, (..., 4), of sets of points (..., N, 2), weighted by (..., N)."""
+    points_xy = np.asarray(points_xy, dtype=np.float64)
+    w = shares(points_xy, weights)[..., None]
+    centred = points_xy - (w * points_xy).sum(-2, keepdims=True)
+    return typing.cast(Floats, (w * _cubes(centred)).sum(-2))
+
+
+def _cubes(points_xy: Floats) -> Floats:
+    """Return x^3, x^2 y, x y^2, y^3, (..., 4)."""
+    x, y = points_xy[..., 0], points_xy[..., 1]
+    return np.stack([x * x * x, x * x * y, x * y * y, y * y * y], axis=-1)
+
+
 def shares(points_xy: Floats, weights: npt.ArrayLike | None) -> Floats:
     """Return weights (..., N) that sum to 1 for points (..., N, 2)."""
     if weights is None:
@@ -126,6 +163,32 @@ def centre_rows(found: Moments, depth: npt.ArrayLike) -> Floats:
     rows[..., 1, 3] += k * found.n02
     rows[..., 1, 4] -= k * found.n11
     return rows
+
+
+def orientation_row(found: Moments, thirds: Floats) -> Floats:
+    """Return the interaction rows (..., 6) of `Moments.orientation`.
+
+    Parameters
+    ----------
+    found : Moments
+    thirds : (..., 4), n30, n21, n12, n03 of the same region or points
+
+    A shape without a main axis (a disc, a square) has no orientation: its row is not finite.
+    """
+    k = 5.0 if found.region else 2.0
+    n30, n21, n12, n03 = np.moveaxis(np.asarray(thirds, dtype=np.float64), -1, 0)
+    n20, n11, n02 = found.n20, found.n11, found.n02
+    xg, yg = found.centre[..., 0], found.centre[..., 1]
+    across, trace = n20 - n02, n20 + n02
+    row = np.zeros((*n20.shape, 6))
+    row[..., 3] = (k * (n12 * across + n11 * (n03 - n21)) + yg * n11 * trace
+                   + xg * (n02 * across - 2 * n11 * n11))
+    row[..., 4] = (-k * (n21 * across + n11 * (n12 - n30)) + xg * n11 * trace
+                   - yg * (n20 * across + 2 * n11 * n11))
+    with np.errstate(all='ignore'):
+        row[..., 3:5] /= (across * across + 4 * n11 * n11)[..., None]
+    row[..., 5] = -1.0
+    return row
 
 
 def spread_row(points_xy: npt.ArrayLike, depth: npt.ArrayLike) -> Floats:
