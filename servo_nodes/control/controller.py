@@ -194,7 +194,9 @@ class Controller:
         self._ticked = now
         self._progress.leash.add(self._sent, duration)
         self._intake.moved(self._sent, duration)
-        self._around.tick()
+        self._around.tick(duration)
+        if duration > self._settings.watchdog.timeout:
+            self._sent = REST
         self._take(now)
         if self._state in ENGAGED:
             if self._starting:

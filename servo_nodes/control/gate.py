@@ -131,6 +131,10 @@ def _overrun(s: Situation) -> int:
     return s.late_in_a_row
 
 
+def _slept(s: Situation) -> int:
+    return not s.slept <= s.watchdog.timeout
+
+
 def _features_silent(s: Situation) -> int:
     return not s.heard_age <= s.watchdog.timeout
 
@@ -207,6 +211,9 @@ TABLE: tuple[Row, ...] = (
         "the law's twist: expected six finite numbers, got others; check depths and "
         'camera_info')),
     _drop_row(Reason.NOT_FINITE, 1, 'check the tracker and its depth image'),
+    _row(Reason.OVERRUN, _slept, _HOLD, sentence=lambda s: (
+        f'the loop did not run for {s.slept:.3f} s, at most {s.watchdog.timeout:g} s allowed; '
+        'free a core, raise the priority, and let nothing pause the process')),
     _row(Reason.OVERRUN, _overrun, _HOLD, trigger=6, sentence=lambda s: (
         f'{s.late_in_a_row} ticks in a row came late, the last by {1e3 * s.late:.1f} ms, at most '
         '5 allowed; free a core, raise the priority, or lower rate')),

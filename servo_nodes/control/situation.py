@@ -39,6 +39,7 @@ class Situation(typing.NamedTuple):
     crowded : float, share of the points along the image border or beyond
     late_in_a_row : int, ticks
     late : float, s, of the last late tick
+    slept : float, s, between this tick and the one before
     """
 
     watchdog: WatchdogSettings
@@ -71,3 +72,4 @@ class Situation(typing.NamedTuple):
     crowded: float = 0.0
     late_in_a_row: int = 0
     late: float = 0.0
+    slept: float = 0.0

@@ -19,6 +19,7 @@ class Surroundings:
         self.beat: Stamp | None = None
         self.late = 0.0
         self.late_in_a_row = 0
+        self.slept = 0.0
         self._is_late = False
 
     def calibrate(self, camera: Camera, *, engaged: bool) -> bool:
@@ -41,15 +42,16 @@ class Surroundings:
         """Note that the coming tick is late."""
         self.late, self._is_late = late_ns / SECOND_NS, True
 
-    def tick(self) -> None:
-        """Count late ticks in a row, at each tick."""
+    def tick(self, slept: float) -> None:
+        """Count late ticks in a row, at each tick; `slept` is the time since the one before, s."""
+        self.slept = slept
         self.late_in_a_row = self.late_in_a_row + 1 if self._is_late else 0
         self._is_late = False
 
     def release(self) -> None:
         """Forget what was latched."""
         self.halted, self.camera_changed = self.halt, ''
-        self.late_in_a_row = 0
+        self.late_in_a_row, self.slept = 0, 0.0
 
 
 def _words(camera: Camera | None) -> str:

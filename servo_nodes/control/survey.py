@@ -42,7 +42,8 @@ def surveyed(settings: ControllerSettings, around: Surroundings, intake: Intake,
         heard_age=age(intake.heard, now), good_age=age(intake.good, now),
         image_age=age(intake.image, now), law_is_finite=law_is_finite, condition=condition,
         smallest=smallest, refusal=refusal, error_px=error_px, crowded=intake.crowded,
-        late_in_a_row=around.late_in_a_row, late=around.late)
+        late_in_a_row=around.late_in_a_row, late=around.late,
+        slept=around.slept)
 
 
 def broken(settings: ControllerSettings, error: Exception) -> Situation:

@@ -14,7 +14,6 @@ from geometry_msgs.msg import TwistStamped
 from rclpy.duration import Duration
 from std_srvs.srv import SetBool, Trigger
 
-from servo_nodes import wire
 from servo_nodes.control.controller import Controller, ControllerSettings
 from servo_nodes.control.states import ENGAGED
 from servo_nodes.ros.diagnostics import OK, WARN
@@ -23,8 +22,9 @@ from servo_nodes.ros.options import ControllerNodeSettings
 from servo_nodes.ros.pacer import Pacer, raise_priority
 from servo_nodes.ros.process import run
 from servo_nodes.ros.reporter import Reporter
+from servo_nodes.ros.sender import Sender
 from servo_nodes.ros.shell import Shell, pause
-from servo_nodes.values import Answer, Stamp, Twist
+from servo_nodes.values import Answer, Stamp
 
 ZEROS = 20
 LAST_ZEROS = 5
@@ -38,12 +38,12 @@ class ControllerNode(Shell):
         self._lock = threading.Lock()
         self._pacer: Pacer | None = None
         self._zeros_left = 0
-        self._frame = ''
 
     def configure(self) -> str:
         """Make the core and its doors."""
         self.controller = Controller(self.parameters[ControllerSettings])
         self._command = self.doors.publish(TwistStamped, 'camera_twist')
+        self._sender = Sender(self, self._command)
         self.reporter = Reporter(self, self._command)
         self._inputs = Inputs(self, self.controller, self._lock,
                               rectified=self.parameters[ControllerNodeSettings].image.rectified)
@@ -98,14 +98,8 @@ class ControllerNode(Shell):
             self._zeros_left = ZEROS
         if engaged or self._zeros_left > 0:
             self._zeros_left -= 1
-            self._publish(command.twist)
+            self._sender.send(command.twist)
         self.reporter.note(command, late, time.monotonic_ns() - now)
-
-    def _publish(self, twist: Twist) -> None:
-        message = TwistStamped()
-        self._frame = twist.frame_id
-        wire.fill_twist(message, twist, self.now_ns())
-        self._command.publish(message)
 
     def _come_to_rest(self) -> None:
         if self._pacer is not None:
@@ -113,7 +107,7 @@ class ControllerNode(Shell):
         with self._lock:
             self.controller.engage(False)
         for _ in range(LAST_ZEROS):
-            self._publish(Twist.zero(self._frame))
+            self._sender.send_zero()
             pause(0.01)
         self._command.wait_for_all_acked(Duration(nanoseconds=100_000_000))
 

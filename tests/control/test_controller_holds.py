@@ -161,6 +161,19 @@ def test_a_paused_process_wakes_up_at_rest_and_stays_there_until_fresh_views_com
         assert command.state is State.HOLDING and not command.twist.vector.any()
 
 
+def test_a_loop_that_slept_starts_from_rest_even_when_a_fresh_view_has_come():
+    loop = Loop().engaged(40)
+    assert speed(loop.commands[-1])[0] > 0.09
+    loop.now += 2000 * MS
+    loop.controller.observe(view(loop.now), loop.now)
+    command = loop.controller.command(loop.now)
+    assert (command.state, command.reason) == (State.HOLDING, Reason.OVERRUN)
+    assert not command.twist.vector.any()
+    assert command.detail.startswith('the loop did not run for 2.0')
+    moving = [command.twist.vector.any() for command in (loop.tick() for _ in range(40))]
+    assert not any(moving[:3]) and moving[-1]
+
+
 def test_a_tick_that_is_late_now_and_then_does_not_hold():
     loop = Loop().engaged()
     for k in range(100):

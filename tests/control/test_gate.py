@@ -64,6 +64,8 @@ ROWS = [
       {'heartbeat__required': True, 'heartbeat_age': 0.9, 'heartbeat__timeout': 1.0}]),
     (Reason.NOT_FINITE, HOLD, [{'law_is_finite': False}], [{'law_is_finite': True}]),
     (Reason.NOT_FINITE, HOLD, [bad(Reason.NOT_FINITE), bad(Reason.NOT_FINITE, 1, 9.0)], [{}]),
+    (Reason.OVERRUN, HOLD, [{'slept': 0.1201}, {'slept': math.inf}, {'slept': math.nan}],
+     [{'slept': 0.12}, {'slept': 0.9, 'watchdog__timeout': 1.0}]),
     (Reason.OVERRUN, HOLD, [{'late_in_a_row': 6, 'late': 0.012}], [{'late_in_a_row': 5}]),
     (Reason.FEATURES_SILENT, HOLD,
      [{'heard_age': age, 'good_age': age} for age in (0.1201, math.inf, math.nan)],
@@ -234,6 +236,8 @@ def test_the_sentences_carry_the_numbers_of_the_moment():
         'condition 2e+03 and smallest singular value 0.0002, at most 1000 and at least 0.001')
     assert said(late_in_a_row=7, late=0.0123).startswith(
         '7 ticks in a row came late, the last by 12.3 ms, at most 5 allowed')
+    assert said(slept=0.5).startswith(
+        'the loop did not run for 0.500 s, at most 0.12 s allowed; free a core')
     assert said(crowded=0.8).startswith('80 % of the points crowd the image border, at most 70 %')
     assert said(crowded=0.5).startswith('50 % of the points crowd the image border, full speed up')
     assert said(heartbeat__required=True, heartbeat_age=math.inf).startswith(

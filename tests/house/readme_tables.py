@@ -49,7 +49,7 @@ MEANINGS = {
     'travel_limit': 'the motion since engaging exceeds its leash',
     'heartbeat_lost': "the operator's side has stopped saying that it is there",
     'halted': '`~/halt` was true',
-    'overrun': "the controller's own tick came late several times in a row",
+    'overrun': "the controller's own tick came late several times in a row, or the loop slept",
     'clock_jump': 'time was reset under the loop',
     'exception': 'an error of the program',
 }

@@ -18,8 +18,10 @@ from servo_nodes.ros.limiter import Limiter
 from servo_nodes.ros.meters import Arrivals, Durations
 from servo_nodes.ros.pacer import Pacer
 from servo_nodes.ros.parameters import descriptor
+from servo_nodes.ros.sender import MOST_IN_A_ROW, Sender
 from servo_nodes.ros.timeline import Timeline
 from servo_nodes.settings import Checked, definitions, setting
+from servo_nodes.values import Twist
 
 MS = 1_000_000
 
@@ -195,3 +197,51 @@ def huge_png():
 def test_what_is_no_sound_picture_is_refused_before_it_is_unpacked(data, words):
     with pytest.raises(ValueError, match=words):
         image_from_compressed(compressed(data))
+
+
+class Refusing:
+    """A publisher that takes a message only when it is told to."""
+
+    def __init__(self):
+        self.takes, self.sent = True, []
+
+    def publish(self, message):
+        if not self.takes:
+            raise RuntimeError('cannot publish data')
+        self.sent.append(message)
+
+
+class Listening:
+    """As much of a node as a sender needs."""
+
+    def __init__(self):
+        self.words = []
+
+    def now_ns(self):
+        return 5
+
+    def warn_seldom(self, key, text):
+        self.words.append(text)
+
+
+def test_a_command_the_middleware_refuses_is_lost_and_the_next_one_goes_out():
+    node, publisher = Listening(), Refusing()
+    sender = Sender(node, publisher)
+    publisher.takes = False
+    for _ in range(MOST_IN_A_ROW - 1):
+        sender.send(Twist([0.1, 0, 0, 0, 0, 0], 'camera'))
+    assert sender.refused == MOST_IN_A_ROW - 1 and not publisher.sent
+    assert 'expected the middleware to take every command' in node.words[0]
+    publisher.takes = True
+    sender.send_zero()
+    assert publisher.sent[0].header.frame_id == 'camera'
+    assert publisher.sent[0].twist.linear.x == 0.0
+
+
+def test_a_middleware_that_takes_nothing_any_more_ends_the_node():
+    publisher = Refusing()
+    publisher.takes = False
+    sender = Sender(Listening(), publisher)
+    with pytest.raises(RuntimeError, match='cannot publish'):
+        for _ in range(MOST_IN_A_ROW):
+            sender.send(Twist.zero('camera'))
