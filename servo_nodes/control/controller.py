@@ -2,10 +2,9 @@
 # SPDX-License-Identifier: Apache-2.0
 """The controller: views and time in, commands out; composes servo, gate and states.
 
-Observing and deciding are two methods: what comes from outside is only noted, `command` judges it
-and always answers. The one clock is steady and counts integer nanoseconds; whoever hands over a
-view translates its stamp to that clock. `observe`, `refuse`, `heartbeat`, `halt`, `graph`,
-`overrun` and `jump` leave a note and may come from another thread; the others must not overlap.
+What comes from outside is only noted; `command` judges it and always answers. The one clock is
+steady, in integer ns; whoever hands over a view translates its stamp. `observe`, `refuse`, `halt`,
+`heartbeat`, `graph`, `overrun`, `jump` may come from another thread; the others must not overlap.
 """
 
 from __future__ import annotations
@@ -195,8 +194,7 @@ class Controller:
         self._progress.leash.add(self._sent, duration)
         self._intake.moved(self._sent, duration)
         self._around.tick(duration)
-        if duration > self._settings.watchdog.timeout:
-            self._sent = REST
+        self._sent = self._sent if duration <= self._settings.watchdog.timeout else REST
         self._take(now)
         if self._state in ENGAGED:
             if self._starting:
@@ -297,6 +295,6 @@ class Controller:
     def _answer(self, now: Stamp, figures: Mapping[str, float]) -> Command:
         solution, camera = self._solution, self._around.camera
         frame = self._outlet.frame or ('' if camera is None else camera.frame_id)
+        stamp = None if solution is None else solution.view_stamp
         return Command(Twist(self._outlet.expressed(self._sent), frame), self._state, self._reason,
-                       self._detail, now, None if solution is None else solution.view_stamp,
-                       figures)
+                       self._detail, now, stamp, figures)
