@@ -16,6 +16,7 @@ import numpy as np
 import pytest
 import scipy.integrate
 import scipy.linalg
+import scipy.optimize
 import scipy.spatial
 
 from servo_nodes import motion
@@ -26,7 +27,6 @@ from servo_nodes.offline import battery
 
 BARE = LawSettings(damping=DampingSettings(below=0.0))
 CHOICES = ('current', 'goal', 'mean', 'blend')
-ROLL, PLANE_170, ROLL_180 = 0, 5, 6
 
 
 def rotated(degrees, translation=(0, 0, 0.5)):
@@ -145,37 +145,76 @@ def test_a_sideways_error_decays_by_one_minus_gain_times_step(gain, step, share,
     assert after == pytest.approx((1 - gain * step) ** count * 0.05, rel=1e-6)
 
 
-def trail(starts, choice, step, samples):
-    """Return the poses (samples + 1, B, 4, 4) that a law of gain 1 goes through."""
-    settings, poses = replace(BARE, interaction=choice), [starts]
-    goal_xy, goal_depths = pose.image(battery.home(), battery.square())
-    for _ in range(samples):
-        xy, depths = pose.image(poses[-1], battery.square())
-        twist = law.twists(xy, goal_xy, depths, goal_depths, settings, gain=1.0)
-        poses.append(motion.exp(-twist * step) @ poses[-1])
-    return np.array(poses)
+def flight(start, choice, seconds, *, corners=None, gain=1.0, until=None):
+    """Return continuous motion (3, 4) under the law: SciPy's Runge-Kutta of order 8, dense.
+
+    It ends early where `until`, of a pose (3, 4), becomes zero.
+    """
+    settings = replace(BARE, interaction=choice)
+
+    def rates(_, rows):
+        T = np.vstack([rows.reshape(3, 4), (0, 0, 0, 1)])
+        v, w = np.split(law.twists(*_stacked(T, corners), settings, gain=gain), 2)
+        return (-np.cross(w, T[:3], axisb=0, axisc=0) - np.outer(v, T[3])).ravel()
+
+    def event(_, rows):
+        return until(rows.reshape(3, 4))
+
+    event.terminal = True
+    found = scipy.integrate.solve_ivp(rates, (0, seconds), start[:3].ravel(), method='DOP853',
+                                      rtol=1e-10, atol=1e-12, dense_output=True,
+                                      events=None if until is None else event)
+    return found.t[-1], lambda time: found.sol(time).reshape(3, 4)
 
 
-def test_a_pure_roll_follows_its_closed_form():
-    """4.3: current retreats to 1/cos(a/2), goal advances, both means turn on the spot."""
-    starts = np.array([rotated((0, 0, degrees)) for degrees in (30, 60, 90, 120, 150)])
-    left = {'current': (10.950034, 21.325857, 30.198408, 35.407423, 30.399206),
-            'mean': (10.927298, 21.198644, 30.155558, 37.155707, 41.629089),
-            'blend': (11.25926, 23.982318, 40.395063, 65.009424, 107.8637)}
-    for choice, angles in left.items():
-        poses = trail(starts, choice, 1 / 500, 500)
-        np.testing.assert_allclose(np.linalg.norm(vector_deg(poses[-1]), axis=-1), angles,
-                                   rtol=4e-3, err_msg=choice)
-        depth = poses[:, :, 2, 3] / 0.5
+ROLLS = {30: (1.03527618, 1.032690929, 10.950034, 10.927298, 11.25926),
+         60: (1.154700538, 1.141493129, 21.325857, 21.198644, 23.982318),
+         90: (1.414213562, 1.367284712, 30.198408, 30.155558, 40.395063),
+         120: (2, 1.818580067, 35.407423, 37.155707, 65.009424),
+         150: (3.863703305, 2.751019795, 30.399206, 41.629089, 107.8637),
+         170: (11.47371325, 3.606347712, 13.3194, 42.99733, 153.24498)}
+
+
+@pytest.mark.parametrize('degrees', list(ROLLS))
+def test_a_pure_roll_follows_its_closed_form(degrees):
+    """4.3: current retreats to 1 / cos(a / 2) at ln 2, both means turn on the spot."""
+    peak, away, *angles = ROLLS[degrees]
+    for choice, angle in zip(('current', 'mean', 'blend'), angles, strict=True):
+        _, at = flight(rotated((0, 0, degrees)), choice, 1.0)
+        assert np.linalg.norm(vector_deg(at(1.0))) == pytest.approx(angle, rel=1e-6), choice
         if choice == 'current':
-            peaks = (1.03527618, 1.154700538, 1.414213562, 2, 3.863703305)
-            later = trail(poses[-1], choice, 1 / 500, 200)[:, :, 2, 3] / 0.5
-            np.testing.assert_allclose(np.maximum(depth.max(0), later.max(0)), peaks, rtol=6e-3)
+            assert at(np.log(2))[2, 3] / 0.5 == pytest.approx(peak, rel=1e-6)
+            assert at(1.0)[2, 3] / 0.5 == pytest.approx(away, rel=1e-6)
         else:
-            np.testing.assert_allclose(depth, 1, atol=1e-9)
-    depth = trail(starts[:4], 'goal', 1 / 200, 1200)[:, :, 2, 3] / 0.5
-    np.testing.assert_allclose(depth.min(0), (0.9655323074, 0.8596219811, 0.6736120292,
-                                              0.387734349), rtol=1.5e-2)
+            np.testing.assert_allclose(at(1.0)[:, 3], (0, 0, 0.5), atol=1e-9)
+
+
+def test_nearly_half_a_turn_takes_the_camera_a_hundred_times_as_far_away():
+    _, at = flight(rotated((0, 0, 179)), 'current', 1.0)
+    assert at(np.log(2))[2, 3] / 0.5 == pytest.approx(114.5930135, rel=1e-5)
+
+
+@pytest.mark.parametrize('degrees, turned, nearest', [
+    (30, 15.086869, 0.9655323074), (60, 30.725835, 0.8596219811), (90, 47.653541, 0.6736120292),
+    (120, 67.186403, 0.387734349), (140, None, 0.1198398874)])
+def test_with_the_goal_matrix_a_roll_leads_as_near_the_target_as_published(
+        degrees, turned, nearest):
+    """4.3: 1 - (roll - a) tan(a / 2) with a to go, nearest where a + sin(a) is the roll."""
+    angle = scipy.optimize.brentq(lambda a: a + np.sin(a) - np.radians(degrees), 0, np.pi)
+
+    def left(T):
+        return np.arctan2(T[1, 0], T[0, 0]) - angle
+
+    time, at = flight(rotated((0, 0, degrees)), 'goal', 10.0, until=left)
+    assert at(time)[2, 3] / 0.5 == pytest.approx(nearest, rel=1e-6)
+    for T in (at(0.3 * time), at(0.8 * time)):
+        to_go = left(T) + angle
+        along = 1 - (np.radians(degrees) - to_go) * np.tan(to_go / 2)
+        assert T[2, 3] / 0.5 == pytest.approx(along, rel=1e-6)
+    for near in (time - 0.01, time + 0.01):
+        assert at(near)[2, 3] > at(time)[2, 3]
+    if turned is not None:
+        assert np.degrees(angle) == pytest.approx(turned, abs=1e-6)
 
 
 @pytest.mark.parametrize('degrees', [30, 90, 150, 170])
@@ -236,14 +275,12 @@ def test_an_advance_follows_its_closed_form():
              'goal': ((0.25, -0.5, 0.375), (5.5951702, 3.422023, 8.6937825)),
              'mean': ((0.4, -0.2, 0.7058823529), (4.7585718, 4.0085714, 6.5106105)),
              'blend': ((0.625, -0.3125, 3.1875), (4.4688002, 3.8252994, 5.1741937))}
-    step = 0.005
     for choice, (speeds, times) in table.items():
-        for k in range(3):
-            np.testing.assert_allclose(_first(starts[k], choice), (0, 0, speeds[k], 0, 0, 0),
-                                       atol=1e-9)
-        away = np.abs(trail(starts, choice, step, round(9.0 / step))[:, :, 2, 3] / 0.5 - 1)
-        reached = step * np.argmax(away <= 0.01, axis=0)
-        np.testing.assert_allclose(reached, times, rtol=6e-3, err_msg=choice)
+        for start, speed, time in zip(starts, speeds, times, strict=True):
+            np.testing.assert_allclose(_first(start, choice), (0, 0, speed, 0, 0, 0), atol=1e-9)
+            found, _ = flight(start, choice, 20.0,
+                              until=lambda T: abs(T[2, 3] / 0.5 - 1) - 0.01)
+            assert found == pytest.approx(time, rel=1e-6), choice
 
 
 def test_the_mean_matrix_is_right_to_third_order_and_the_others_to_second():
@@ -261,32 +298,18 @@ def test_the_mean_matrix_is_right_to_third_order_and_the_others_to_second():
             assert left == pytest.approx(residual, rel=1e-4), (k, choice)
 
 
-def flown(start, corners, seconds, gain):
-    """Return the pose after continuous motion under the law, by SciPy's Runge-Kutta of order 8."""
-    settings = replace(BARE, interaction='current')
-
-    def rates(_, rows):
-        T = np.vstack([rows.reshape(3, 4), (0, 0, 0, 1)])
-        v, w = np.split(law.twists(*_stacked(T, corners), settings, gain=gain), 2)
-        return (-np.cross(w, T[:3], axisb=0, axisc=0) - np.outer(v, T[3])).ravel()
-
-    end = scipy.integrate.solve_ivp(rates, (0, seconds), start[:3].ravel(), method='DOP853',
-                                    rtol=1e-11, atol=1e-12)
-    return end.y[:, -1].reshape(3, 4)
-
-
 def test_three_points_decay_exactly_and_end_at_a_wrong_pose():
     """TRI: every error shrinks by 1 / e in 1 / gain; it ends at zero, 31.8 degrees off."""
     corners, start = battery.square()[:3], battery.TASKS[3].pose
     xy, goal_xy, _, _ = _stacked(start, corners)
-    tau = flown(start, corners, 2.0, 0.5)
+    _, at = flight(start, 'current', 50.0, corners=corners, gain=0.5)
+    tau, end = at(2.0), at(50.0)
     np.testing.assert_allclose(vector_deg(tau), (8.630620204, -24.23850728, 3.104835986),
                                atol=1e-6)
     np.testing.assert_allclose(tau[:, 3], (0.02147331369, 0.0001713634781, 0.5289338681),
                                atol=1e-8)
     np.testing.assert_allclose(pose.image(tau, corners)[0] - goal_xy, (xy - goal_xy) / np.e,
                                atol=1e-9)
-    end = flown(start, corners, 50.0, 0.5)
     np.testing.assert_allclose(vector_deg(end), (7.818908569, -30.60985966, -3.922971531),
                                atol=1e-6)
     np.testing.assert_allclose(end[:, 3], (0.01299994725, 0.01299994723, 0.4440584744),
@@ -335,9 +358,20 @@ def test_a_mirrored_tilt_ends_in_a_spurious_equilibrium(tilt, distance, end_tilt
     assert np.linalg.norm(xy - goal_xy) == pytest.approx(error, rel=1e-5)
     twist = law.twists(xy, goal_xy, depths, goal_depths, settings, gain=1.0)
     assert np.linalg.norm(twist) < 1e-9
+    slowest = -np.linalg.eigvals(_slopes(end, goal)).real.max()
+    assert slowest > 0.5
+    if tilt == 45:
+        assert slowest == pytest.approx(0.648211, rel=1e-5)
     found = cv2.solvePnPGeneric(battery.square(), np.ascontiguousarray(goal_xy), np.eye(3), None,
                                 flags=cv2.SOLVEPNP_IPPE)[1]
     assert len(found) == 2
+
+
+def _slopes(end, goal):
+    """Return the derivative (6, 6) of the twist by the displacement of the camera from `end`."""
+    moved = [[_first(motion.exp(-way * step) @ end, 'current', goal=goal) for way in (1, -1)]
+             for step in 1e-5 * np.eye(6)]
+    return np.array([(ahead - behind) / 2e-5 for ahead, behind in moved]).T
 
 
 def test_three_points_lose_rank_on_their_cylinder_and_a_fourth_restores_it():
