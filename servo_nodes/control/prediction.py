@@ -11,7 +11,7 @@ predictor: Smith 1957, from memory; here with the exact SE(3) motion and hence n
 delay).
 
 `motion.exp` broadcasts, which costs far more than one motion does; the loop needs one at a time,
-so `rigid` spells it out in plain numbers.
+so `rigid` spells it out in plain numbers, and `dot` multiplies, at half the cost of `@`.
 """
 
 from __future__ import annotations
@@ -91,7 +91,8 @@ class Odometer:
             if start == time:
                 return passage
             if start < time:
-                return rigid(twist, (start - time) / SECOND_NS) @ passage
+                later: Floats = rigid(twist, (start - time) / SECOND_NS).dot(passage)
+                return later
         return self._log[0][1]
 
     def _passage_now(self, now: Stamp) -> Floats:
@@ -109,7 +110,8 @@ class Odometer:
             return None
         if self._start is None or self._start[0] != start:
             self._start = start, _undone(self._passage_at(start))
-        return self._passage_now(end) @ self._start[1]
+        between: Floats = self._passage_now(end).dot(self._start[1])
+        return between
 
 
 def _undone(passage: Floats) -> Floats:
@@ -141,7 +143,7 @@ def moved(rays: Floats, passage: Floats) -> tuple[Floats, Floats]:
     A point that would come closer than a tenth of its depth keeps its old place: no prediction is
     better than one through the lens.
     """
-    seen = passage[:3] @ rays
+    seen: Floats = passage[:3].dot(rays)
     ahead = seen[2]
     if np.minimum.reduce(ahead) > _CLOSEST:
         return seen[:2] / ahead, rays[3] / ahead
