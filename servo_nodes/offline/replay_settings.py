@@ -20,9 +20,9 @@ MOST_BYTES = 1024 * 1024
 NODES: dict[str, type] = {'tracker': TrackerSettings, 'controller': ControllerSettings,
                           'simulator': SimulatorSettings}
 # What only the nodes know, which a replay has none of.
-SHELLS = ('autostart', 'image_transport', 'overlay.rate', 'seed', 'image.rectified', 'clock.lead',
-          'clock.speed', 'publish_depth', 'target_frame', 'use_sim_time', 'start_type_description_'
-          'service')
+SHELLS = ('autostart', 'priority', 'image_transport', 'overlay.rate', 'seed', 'image.rectified',
+          'clock.lead', 'clock.speed', 'publish_depth', 'target_frame', 'use_sim_time',
+          'start_type_description_service')
 _SHELL_GROUPS = ('qos_overrides.',)
 # The fields of rcl_interfaces/ParameterValue by the number of its type.
 _VALUES = {1: 'bool_value', 2: 'integer_value', 3: 'double_value', 4: 'string_value',

@@ -16,6 +16,7 @@ import sys
 import threading
 from collections.abc import Callable
 
+import cv2
 import rclpy
 from rclpy.executors import ExternalShutdownException, ShutdownException, SingleThreadedExecutor
 from rclpy.signals import SignalHandlerOptions
@@ -52,6 +53,8 @@ def _noted(number: int, frame: object) -> None:
 def run(make: Callable[[], Shell], argv: list[str] | None = None) -> int:
     """Run a node to its end; return the exit code: 0 asked to, 1 failed, 2 unusable parameters."""
     call = Call()
+    # OpenCV's workers spin while they wait, and take from the other nodes what they save this one.
+    cv2.setNumThreads(1)
     try:
         rclpy.init(args=argv, signal_handler_options=SignalHandlerOptions.NO)
         node = make()

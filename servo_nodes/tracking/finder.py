@@ -51,10 +51,11 @@ class Finder:
 
     def find(self, grey: Grey, brightness: float) -> tuple[Sight | None, str]:
         """Return the goal in an image, and in words what was done, or why it was not found."""
-        sight, words = self._followed(grey, brightness), 'following'
+        half = follow.halved(grey)
+        sight, words = self._followed(grey, half, brightness), 'following'
         if sight is None:
             sight, words = self.search(grey)
-        self._last, self._before, self._brightness = sight, grey, brightness
+        self._last, self._before, self._brightness = sight, half, brightness
         return sight, words
 
     def lose(self) -> None:
@@ -87,14 +88,14 @@ class Finder:
         doubt = self._doubt(sight, self._options.acquire_points)
         return (None, f'goal not found: {doubt}') if doubt else (sight, 'found')
 
-    def _followed(self, grey: Grey, brightness: float) -> Sight | None:
+    def _followed(self, grey: Grey, half: Grey, brightness: float) -> Sight | None:
         if self._last is None or self._before is None:
             return None
         before = self._before
         ratio = (brightness + 1.0) / (self._brightness + 1.0)
         if not 1 / _EXPOSURE_STEP <= ratio <= _EXPOSURE_STEP:
-            before = _exposed_as(before, grey)
-        matrix = follow.carried(self._reference, self._camera, self._last, before, grey)
+            before = _exposed_as(before, half)
+        matrix = follow.carried(self._reference, self._camera, self._last, before, half)
         if matrix is None:
             return None
         reference, camera, limits = self._reference, self._camera, self._limits

@@ -29,9 +29,9 @@ from servo_nodes.values import Floats
 _cv: typing.Any = cv2
 Index = npt.NDArray[np.intp]
 
-WINDOW, LEVELS = (21, 21), 3
-_STOP = (_cv.TERM_CRITERIA_COUNT | _cv.TERM_CRITERIA_EPS, 20, 0.01)
-_MOST_RETURN_PX, _AGREE_PX, _LEAST_CARRIED = 0.5, 2.0, 6
+WINDOW, LEVELS = (11, 11), 2
+_STOP = (_cv.TERM_CRITERIA_COUNT | _cv.TERM_CRITERIA_EPS, 10, 0.02)
+_MOST_RETURN_PX, _AGREE_PX, _LEAST_CARRIED, _MOST_CARRIED = 0.5, 2.0, 6, 60
 _FLOOR_PX, _NEAR_PX = 0.03, 0.5
 
 
@@ -73,27 +73,36 @@ class Limits:
     residual_px: float
 
 
+def halved(grey: Grey) -> Grey:
+    """Return an image of half the size, whose pixel (u, v) is centred on pixel (2u, 2v)."""
+    return np.asarray(cv2.pyrDown(grey), dtype=np.uint8)
+
+
 def carried(reference: Reference, camera: Camera, last: Sight, before: Grey,
             now: Grey) -> Floats | None:
     """Return the homography goal -> image after following the last points from `before` to `now`.
 
-    Returns None when too few return to where they came from, or agree.
+    Both are images of half the size (`halved`), and at most `_MOST_CARRIED` points are taken: a
+    first guess need not be finer, all points are registered at full size afterwards. Returns None
+    when too few return to where they came from, or agree.
     """
-    start = last.uv.astype(np.float32)
+    taken = slice(None, None, -(-len(last) // _MOST_CARRIED))
+    last_uv, last_xy, index = last.uv[taken], last.xy[taken], last.index[taken]
+    start = (0.5 * last_uv).astype(np.float32)
     there, found, _ = _cv.calcOpticalFlowPyrLK(
         before, now, start, None, winSize=WINDOW, maxLevel=LEVELS, criteria=_STOP)
     back, found_back, _ = _cv.calcOpticalFlowPyrLK(
         now, before, there, None, winSize=WINDOW, maxLevel=LEVELS, criteria=_STOP)
-    uv = np.asarray(there, dtype=np.float64).reshape(-1, 2)
+    uv = 2.0 * np.asarray(there, dtype=np.float64).reshape(-1, 2)
     gap = np.abs(np.asarray(back).reshape(-1, 2) - start).max(-1)
     kept = np.flatnonzero((gap < _MOST_RETURN_PX) & (np.asarray(found).reshape(-1) > 0)
                           & (np.asarray(found_back).reshape(-1) > 0))
     if len(kept) < _LEAST_CARRIED:
         return None
     # The lens is linearised where the point was: near enough for a first guess.
-    moved = uv[kept] - last.uv[kept]
-    xy = last.xy[kept] + (last.to_normalised[kept] @ moved[:, :, None])[:, :, 0]
-    goal_xy = reference.xy[last.index[kept]]
+    moved = uv[kept] - last_uv[kept]
+    xy = last_xy[kept] + (last.to_normalised[taken][kept] @ moved[:, :, None])[:, :, 0]
+    goal_xy = reference.xy[index[kept]]
     plane = plane_through(goal_xy, xy, _AGREE_PX / camera.fx)
     if plane is None or np.count_nonzero(plane[1]) < _LEAST_CARRIED:
         return None
