@@ -165,7 +165,9 @@ def _backdrop(one: Placed, camera: Camera, offset: float, readout: float, grey: 
         return _looked_up(level, texels)
     # OpenCV mirrors step by step, without end for what lies near the horizon of the plane.
     far = _MOST_REFLECTIONS * max(level.pixels.shape[:2])
-    image = _looked_up(level, np.nan_to_num(np.clip(texels, -far, far)))
+    # NumPy 1 widens here, and OpenCV looks up by single floats only.
+    bounded = np.nan_to_num(np.clip(texels, -far, far)).astype(np.float32, copy=False)
+    image = _looked_up(level, bounded)
     image[_depth_rows(inverse, camera, None) <= 0] = 0
     return image
 

@@ -190,7 +190,11 @@ def test_what_stands_still_is_the_same_under_any_shutter(board):
     one = [rig.placed(board, POSES['tilted'])]
     still = render.picture(one, FR1, rig.GLOBAL, grey=True)
     other = render.picture(one, FR1, render.Shutter(exposure=0.02, readout=0.03), grey=True)
-    assert np.abs(still.astype(int) - other).max() <= 1
+    # OpenCV 4 rounds where it samples to 1/32 px: the last bit of a coordinate may move an edge by
+    # that much.
+    difference = np.abs(still.astype(int) - other)
+    assert difference.max() <= (1 if int(cv2.__version__.split('.')[0]) >= 5 else 255 // 32)
+    assert difference.mean() < 0.01
 
 
 def test_a_rolling_shutter_bends_the_nearer_face_more():

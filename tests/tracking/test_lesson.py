@@ -157,7 +157,7 @@ def test_the_predicted_scatter_is_the_scatter_of_poses() -> None:
                                       rvec=np.zeros((3, 1)), tvec=np.array([[0, 0, 0.42]]),
                                       useExtrinsicGuess=True)
         rotation = cv2.Rodrigues(turn)[0]
-        poses.append(np.concatenate([(rotation.T @ (-shift)).ravel() + (0, 0, 0.42),
+        poses.append(np.concatenate([rotation.T @ -shift.ravel() + (0, 0, 0.42),
                                      -turn.ravel()]))
     measured = np.std(poses, axis=0)
     assert np.all(np.abs(measured / predicted - 1) < 0.25)

@@ -19,6 +19,8 @@ from servo_nodes.tracking.options import MarkerOptions
 from servo_nodes.tracking.tracker import Tracker, TrackerSettings
 from tests.tracking.stage import Stage, pose_facing
 
+needs_aruco = pytest.mark.skipif(
+    not hasattr(cv2, 'aruco'), reason='this OpenCV comes without its aruco module')
 SQUARE = np.array([[-0.1, -0.1, 0], [0.1, -0.1, 0], [0.1, 0.1, 0], [-0.1, 0.1, 0]])
 
 
@@ -54,6 +56,7 @@ def test_a_small_square_seen_straight_on_is_called_ambiguous() -> None:
     assert pose_of_plane(small, np.full((4, 2), np.nan)) is None
 
 
+@needs_aruco
 def test_corners_in_real_photographs_lie_where_another_program_found_them(
         shared_data: Path) -> None:
     # gold.json: corners as asserted by the detector's own tests; see ../shared/data/README.md.
@@ -69,6 +72,7 @@ def test_corners_in_real_photographs_lie_where_another_program_found_them(
             assert np.linalg.norm(mine - entry['corners'], axis=1).max() < 0.3
 
 
+@needs_aruco
 def test_the_distance_of_a_real_marker_is_the_published_one(shared_data: Path) -> None:
     folder = shared_data / 'marker_photos'
     gold = json.loads((folder / 'gold.json').read_text())
@@ -99,6 +103,7 @@ def _board() -> np.ndarray:
     return cv2.copyMakeBorder(drawn, 40, 40, 40, 40, cv2.BORDER_CONSTANT, value=255)
 
 
+@needs_aruco
 def test_the_corners_of_a_board_and_their_depth_are_exact() -> None:
     markers = Markers(MarkerOptions(dictionary='4x4_50', side=0.03, board=(7.0, 5.0, 0.04)))
     corners = markers.corners(_board())
@@ -128,6 +133,7 @@ def sheet() -> Stage:
     return Stage(_markers_picture(), 'plumb_bob', wide=0.3, border=235)
 
 
+@needs_aruco
 def test_markers_are_followed_with_true_corners_and_depths(sheet: Stage) -> None:
     rng = np.random.default_rng(0)
     settings = settings_from_mapping(TrackerSettings, {
@@ -149,6 +155,7 @@ def test_markers_are_followed_with_true_corners_and_depths(sheet: Stage) -> None
         assert tracker.status.depth_source == 'marker 16'
 
 
+@needs_aruco
 def test_a_marker_seen_twice_counts_as_not_seen() -> None:
     picture = _markers_picture()
     picture[250:410, 380:540] = picture[30:190, 60:220]
@@ -156,6 +163,7 @@ def test_a_marker_seen_twice_counts_as_not_seen() -> None:
     assert set(corners.ids // 4) == {1, 2}
 
 
+@needs_aruco
 @pytest.mark.parametrize('picture', [np.zeros((480, 640), np.uint8),
                                      np.full((480, 640), 255, np.uint8)])
 def test_no_marker_is_no_corner(picture: np.ndarray) -> None:
@@ -164,6 +172,7 @@ def test_no_marker_is_no_corner(picture: np.ndarray) -> None:
     assert len(corners) == 0
 
 
+@needs_aruco
 def test_a_view_without_its_markers_makes_no_goal(sheet: Stage) -> None:
     settings = settings_from_mapping(TrackerSettings, {
         'detector.kind': 'marker', 'marker.dictionary': '4x4_50'})
