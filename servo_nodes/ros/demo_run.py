@@ -123,7 +123,7 @@ class Run:
             raise Trouble(f'tracker/teach: expected a goal view, got a refusal: {answer.text}')
         self._home = watch.pose
         watch.keep_picture('goal', 'The view it was taught', plain=True)
-        self._say(f'Taught: {answer.text}.')
+        self._say(f'{answer.text[:1].upper()}{answer.text[1:]}.')
 
     def _move_away(self) -> None:
         watch = self._watch
