@@ -27,6 +27,7 @@ from rclpy.executors import SingleThreadedExecutor
 from rclpy.node import Node
 from rclpy.parameter import Parameter
 
+from servo_nodes.ros.demo_processes import dds_profile
 from servo_nodes.values import SECOND_NS
 
 NAMESPACE = '/servo'
@@ -37,16 +38,9 @@ FIND_AGAIN_S = 5.0
 ROOT = pathlib.Path(__file__).resolve().parents[2]
 
 
-def shipped(name: str) -> pathlib.Path | None:
-    """Return a file of `config/`, from the source tree or from where it was installed."""
-    places = (ROOT, pathlib.Path(sys.prefix) / 'share' / 'servo_nodes')
-    return next((place / 'config' / name for place in places
-                 if (place / 'config' / name).is_file()), None)
-
-
 def transport() -> dict[str, str]:
     """Return the environment in which images get through and no listener blocks a publisher."""
-    profile = shipped('dds_profile.xml')
+    profile = dds_profile()
     found = {'RMW_FASTRTPS_PUBLICATION_MODE': 'ASYNCHRONOUS'}
     if profile is not None:
         found['FASTDDS_DEFAULT_PROFILES_FILE'] = str(profile)
